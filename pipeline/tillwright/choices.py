@@ -1,0 +1,43 @@
+"""The named choices of plans, commands and functions, each in one place."""
+
+from __future__ import annotations
+
+from typing import Literal, TypeAlias, get_args
+
+PeriodKind: TypeAlias = Literal["month", "week", "quarter"]
+MonthRule: TypeAlias = Literal["calendar", "whole-weeks", "first-weeks"]
+Returns: TypeAlias = Literal["net", "refuse"]
+ItemCode: TypeAlias = Literal["any", "gtin"]
+StratumRole: TypeAlias = Literal["feed", "region", "outlet", "household_group"]
+Bilateral: TypeAlias = Literal["jevons", "dutot", "fisher", "tornqvist"]
+Geks: TypeAlias = Literal["geks-fisher", "geks-tornqvist"]
+Method: TypeAlias = Literal["jevons", "dutot", "fisher", "tornqvist", "geks-fisher", "geks-tornqvist"]
+Form: TypeAlias = Literal["chained", "direct"]
+Splice: TypeAlias = Literal["movement", "window", "half", "mean"]
+Onto: TypeAlias = Literal["published", "recalculated"]
+WeightSource: TypeAlias = Literal["file", "turnover"]
+WeightFormula: TypeAlias = Literal["lowe", "young"]
+Gate: TypeAlias = Literal["refused-share", "turnover-swing", "missing-outlets", "overlap", "index-failed"]
+
+BILATERAL_FORMULAS: tuple[Bilateral, ...] = get_args(Bilateral)
+GEKS_METHODS: tuple[Geks, ...] = get_args(Geks)
+METHODS: tuple[Method, ...] = get_args(Method)
+FORMS: tuple[Form, ...] = get_args(Form)
+SPLICES: tuple[Splice, ...] = get_args(Splice)
+ONTO: tuple[Onto, ...] = get_args(Onto)
+GATES: tuple[Gate, ...] = get_args(Gate)
+
+# The order is that of precedence: a refused line carries the first rule it breaks.
+REFUSAL_RULES: tuple[str, ...] = (
+    "broken-row",
+    "missing-key",
+    "unreadable-date",
+    "unreadable-number",
+    "non-finite",
+    "quantity-not-positive",
+    "turnover-not-positive",
+    "unit-price-limits",
+    "outside-announced-period",
+    "malformed-item-code",
+    "duplicate-line",
+)

@@ -1,0 +1,158 @@
+"""Every exception that Tillwright raises on purpose.
+
+    TillwrightError                 exit status
+    ├── PlanError                   2   the plan is wrong; carries every problem found
+    ├── CallError                   2   the command or function was called wrongly
+    │   └── MissingColumns          2   a column was named that the file or frame does not have
+    ├── DataError                   3   the data cannot be used
+    │   ├── UnreadableDeliveries    3   files that cannot be read as what they claim to be
+    │   ├── BadPanel                3   a panel that no index can be made of
+    │   └── UnconnectedPeriods      3   a window whose periods share no chain of products
+    ├── WorkspaceBusy               3   another compile holds the workspace
+    └── BrokenInvariant             3   a run-time check failed: a defect, never a result
+
+A message says what, where, how many, and what to do next.  Facts are attributes.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+
+class TillwrightError(Exception):
+    """Base of all; `exit_status` is what the command ends with."""
+
+    exit_status = 3
+
+
+@dataclass(frozen=True, slots=True)
+class PlanProblem:
+    """One thing wrong with a plan: the key, what was found, what is allowed."""
+
+    key: str
+    found: str
+    allowed: str
+
+    def __str__(self) -> str:
+        return f"{self.key}: found {self.found}; allowed: {self.allowed}"
+
+
+class PlanError(TillwrightError):
+    """The plan cannot be used; `problems` lists everything wrong with it."""
+
+    exit_status = 2
+
+    def __init__(self, source: str, problems: Sequence[PlanProblem]) -> None:
+        self.source = source
+        self.problems = tuple(problems)
+        count = len(self.problems)
+        lines = "\n".join(f"  - {problem}" for problem in self.problems)
+        super().__init__(
+            f"The plan {source} has {count} problem{'s' if count != 1 else ''}; nothing was read or written.\n{lines}"
+        )
+
+
+class CallError(TillwrightError):
+    """A command or function was given something it cannot take."""
+
+    exit_status = 2
+
+
+class DataError(TillwrightError):
+    """The data cannot be used as they are."""
+
+
+@dataclass(frozen=True, slots=True)
+class UnreadableFile:
+    """One file that could not be read, and why."""
+
+    feed: str
+    file: str
+    reason: str
+
+
+class UnreadableDeliveries(DataError):
+    """Deliveries that cannot be read; `files` names each with its reason."""
+
+    def __init__(self, files: Sequence[UnreadableFile]) -> None:
+        self.files = tuple(files)
+        lines = "\n".join(f"  - {f.file} (feed {f.feed}): {f.reason}" for f in self.files)
+        count = len(self.files)
+        super().__init__(
+            f"{count} deliver{'ies' if count != 1 else 'y'} cannot be read; the others were taken "
+            f"in, and no index was made.\n{lines}\n"
+            "Ask the sender for a new file, or mend the feed's settings in the plan, and run again."
+        )
+
+
+class MissingColumns(CallError):
+    """A column was named that is not there; `missing` and `present` are column names."""
+
+    def __init__(self, where: str, missing: Sequence[str], present: Sequence[str]) -> None:
+        self.where = where
+        self.missing = tuple(missing)
+        self.present = tuple(present)
+        super().__init__(
+            f"{where} has no column {_quoted(missing)}. "
+            f"Its columns are {_quoted(present)}. Name the column that is meant."
+        )
+
+
+class BadPanel(DataError):
+    """A panel that no index can be made of."""
+
+
+class UnconnectedPeriods(DataError):
+    """The priced periods of a window fall apart into groups that share no product.
+
+    `groups` holds the periods of each group: positions when raised by a kernel, the
+    period labels once `labelled` has been applied.
+    """
+
+    def __init__(self, groups: Sequence[Sequence[object]], where: str = "") -> None:
+        self.groups = tuple(tuple(group) for group in groups)
+        self.where = where
+        sides = " | ".join(_span(group) for group in self.groups)
+        place = f" of {where}" if where else ""
+        super().__init__(
+            f"No index can be made over a window{place}: its periods fall into "
+            f"{len(self.groups)} groups with no product in common ({sides}). Widen the product "
+            "definition, join relaunched items, or choose a window that does not cross the gap."
+        )
+
+    def labelled(self, labels: Sequence[object], where: str) -> UnconnectedPeriods:
+        """The same error with period labels instead of positions and the place named."""
+        named = [[labels[int(str(position))] for position in group] for group in self.groups]
+        return UnconnectedPeriods(named, where)
+
+
+class WorkspaceBusy(TillwrightError):
+    """Another compile holds the workspace."""
+
+    def __init__(self, workspace: str, detail: str) -> None:
+        self.workspace = workspace
+        super().__init__(
+            f"The workspace {workspace} is in use by another compile ({detail}). "
+            "Wait until it has ended, or give this one another folder with --work."
+        )
+
+
+class BrokenInvariant(TillwrightError):
+    """A run-time check failed. Nothing was written for the stage concerned."""
+
+    def __init__(self, check: str, detail: str) -> None:
+        self.check = check
+        super().__init__(
+            f"The check '{check}' failed: {detail}. The stage's table was not written. "
+            "This is a defect of Tillwright or of the machine; please report it with this message."
+        )
+
+
+def _quoted(names: Sequence[str]) -> str:
+    return ", ".join(f"'{name}'" for name in names)
+
+
+def _span(group: Sequence[object]) -> str:
+    shown = [str(member) for member in group]
+    return ", ".join(shown) if len(shown) <= 4 else f"{shown[0]} … {shown[-1]} ({len(shown)} periods)"

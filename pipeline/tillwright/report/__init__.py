@@ -1,0 +1,1 @@
+"""What people read: for now the summary that ends a compile."""

@@ -1,0 +1,64 @@
+"""What every stage is given."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from datetime import date
+
+import polars as pl
+
+from tillwright.periods import label_period, list_periods, next_period
+from tillwright.plan import Plan
+from tillwright.queries import Connection, Resources, connect
+from tillwright.store.references import References
+from tillwright.store.workspace import Workspace
+
+
+@dataclass(frozen=True, slots=True)
+class Context:
+    """One compile: its plan, its small files, its workspace, and the last period asked for."""
+
+    plan: Plan
+    references: References
+    workspace: Workspace
+    resources: Resources
+    through: date | None = None
+
+    def connect(self) -> Connection:
+        """A fresh connection within the resources of the compile."""
+        return connect(self.resources)
+
+    def active_deliveries(self) -> list[str]:
+        """Deliveries whose sums count, in order of feed and arrival."""
+        deliveries = self.workspace.read("deliveries")
+        return deliveries.filter(pl.col("status") == "active")["delivery"].to_list()
+
+    def label(self, period: date) -> str:
+        """A period as people write it."""
+        return label_period(period, self.plan.plan.period)
+
+    def periods(self) -> pl.DataFrame:
+        """period, label, previous_period, next_period from the plan's start to the last one compiled.
+
+        The last one is `through`, or else the last with accepted sales of an active delivery.
+        """
+        kind = self.plan.plan.period
+        last = self.through or self._last_sold()
+        days = list_periods(self.plan.plan.first_day, last, kind) if last else []
+        return pl.DataFrame(
+            {
+                "period": days,
+                "label": [self.label(day) for day in days],
+                "previous_period": [None, *days[:-1]] if days else [],
+                "next_period": [next_period(day, kind) for day in days],
+            },
+            schema={"period": pl.Date, "label": pl.String, "previous_period": pl.Date, "next_period": pl.Date},
+        )
+
+    def _last_sold(self) -> date | None:
+        parts = self.workspace.parts("sales", self.active_deliveries())
+        if not parts:
+            return None
+        last = pl.scan_parquet(parts, glob=False).filter(pl.col("counted")).select(pl.col("period").max()).collect()
+        found: date | None = last.item()
+        return found

@@ -1,0 +1,287 @@
+"""Stage 1: from files to exact sums and refused lines, one delivery at a time.
+
+Lines are read from the file itself and are not written again; `sales` keeps their exact sums per
+delivery, so a corrected file replaces its own sums and nothing else.
+"""
+
+from __future__ import annotations
+
+import math
+import os
+import re
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from datetime import date
+from decimal import Decimal
+from pathlib import Path
+
+import duckdb
+import polars as pl
+
+from tillwright.errors import BrokenInvariant
+from tillwright.periods import parse_any_period
+from tillwright.plan import Feed, Plan
+from tillwright.queries import Connection, define, offer, select
+from tillwright.stages.context import Context
+from tillwright.store.deliveries import DESCRIBING_ROLES, count_lines, hash_file, open_delivery, unreadable
+from tillwright.store.ledger import Arrival, Ledger
+from tillwright.store.workspace import Workspace
+from tillwright.tables import TABLES
+
+PARTS = ("totals", "sales", "refused", "outlet_days", "described")
+
+
+@dataclass(frozen=True, slots=True)
+class Delivery:
+    """One file as received. `present` is false once the file is gone or holds other bytes."""
+
+    feed: Feed
+    path: Path
+    file: str
+    sha256: str
+    arrival: int
+    bytes: int
+    present: bool
+
+    @property
+    def name(self) -> str:
+        """The delivery's name: its feed and the start of its hash."""
+        return f"{self.feed.name}-{self.sha256[:12]}"
+
+
+def receive(plan: Plan, ledger: Ledger) -> list[Delivery]:
+    """Every file of every feed, those seen for the first time entered into the ledger.
+
+    Files of one call arrive in the order of their paths.
+    """
+    return [delivery for feed in plan.feed for delivery in _receive_feed(plan, feed, ledger)]
+
+
+def _receive_feed(plan: Plan, feed: Feed, ledger: Ledger) -> list[Delivery]:
+    known = {(arrival.file, arrival.sha256): arrival for arrival in ledger.arrivals(feed.name)}
+    stamped = {(a.file, a.bytes, a.modified): a.sha256 for a in known.values()}
+    here: dict[tuple[str, str], Path] = {}
+    fresh: list[Arrival] = []
+    for path in plan.delivery_files(feed):
+        status = path.stat()
+        file = Path(os.path.relpath(path, plan.folder)).as_posix()
+        stamp = (file, status.st_size, status.st_mtime_ns)
+        digest = stamped.get(stamp) or hash_file(path)
+        here[file, digest] = path
+        if stamp not in stamped:
+            before = known.get((file, digest))
+            number = (
+                before.arrival if before else len(known) + sum(1 for a in fresh if (a.file, a.sha256) not in known) + 1
+            )
+            fresh.append(Arrival(feed.name, file, digest, number, status.st_size, status.st_mtime_ns))
+    ledger.receive(fresh)
+    return [
+        Delivery(
+            feed,
+            here.get((a.file, a.sha256), plan.resolve(a.file)),
+            a.file,
+            a.sha256,
+            a.arrival,
+            a.bytes,
+            (a.file, a.sha256) in here,
+        )
+        for a in ledger.arrivals(feed.name)
+    ]
+
+
+def take_in(context: Context, connection: Connection, delivery: Delivery) -> int:
+    """Write the parts of one delivery; the number of lines received.
+
+    Raises
+    ------
+    UnreadableDeliveries : the file cannot be read.
+    BrokenInvariant : lines or turnover do not add up.
+    """
+    feed, scope, name = delivery.feed, context.plan.plan, delivery.name
+    announced = announced_period(feed, delivery.path.name)
+    unit_price = feed.limits.unit_price or (0.0, math.inf)
+    open_delivery(connection, delivery.path, feed, context.plan.classification.stratum)
+    define(
+        connection,
+        "lines",
+        period=scope.period,
+        month_rule=scope.month_rule,
+        weeks=scope.weeks,
+        outlet_mapped=feed.columns.outlet is not None,
+        announced_from=announced[0] if announced else None,
+        announced_until=announced[1] if announced else None,
+        unit_price_low=unit_price[0],
+        unit_price_high=unit_price[1],
+        item_code=feed.item_code,
+        returns=feed.returns,
+    )
+    try:
+        tally = select(connection, "tally", delivery=name, feed=feed.name, period=scope.period)
+        parts = {
+            "sales": tally.filter("accepted").drop("accepted"),
+            "refused": select(connection, "refused", delivery=name, feed=feed.name),
+            "outlet_days": select(connection, "outlet_days", delivery=name, feed=feed.name),
+        }
+        if _describes(feed):
+            parts["described"] = select(connection, "described", delivery=name, feed=feed.name)
+        received = count_lines(connection)
+    except duckdb.Error as error:
+        raise unreadable(delivery.path, feed, error) from None
+    totals = _reconcile(delivery, received, tally, parts)
+    for table, frame in parts.items():
+        context.workspace.write(table, frame, name)
+    context.workspace.write("totals", totals, name)
+    return received
+
+
+def part_files(workspace: Workspace, delivery: Delivery) -> list[Path]:
+    """Files that `take_in` writes for a delivery."""
+    return [
+        workspace.path(table, delivery.name) for table in PARTS if table != "described" or _describes(delivery.feed)
+    ]
+
+
+def announced_period(feed: Feed, file_name: str) -> tuple[date, date] | None:
+    """First day and day after the last of the period that a file's name announces, if it does."""
+    found = re.search(feed.announced, file_name) if feed.announced else None
+    if found is None:
+        return None
+    try:
+        return parse_any_period(found["period"])
+    except ValueError:
+        return None
+
+
+def _describes(feed: Feed) -> bool:
+    return any(getattr(feed.columns, role) is not None for role in DESCRIBING_ROLES)
+
+
+def _reconcile(
+    delivery: Delivery, received: int, tally: pl.DataFrame, parts: Mapping[str, pl.DataFrame]
+) -> pl.DataFrame:
+    """The totals of a delivery; its lines and its turnover must add up exactly.
+
+    Lines are held against a plain count of the file, and the turnover that the tally puts down as
+    refused against the refused lines as they are kept.
+    """
+    sales, refused, file = parts["sales"], parts["refused"], delivery.file
+    accepted = int(sales["lines"].sum())
+    turnover_accepted, turnover_refused = _exact_sum(sales["turnover"]), _exact_sum(refused["turnover"])
+    turnover_received = _exact_sum(tally["turnover"])
+    if received != accepted + refused.height:
+        detail = f"{file}: {received} received, {accepted} accepted, {refused.height} refused"
+        raise BrokenInvariant("lines add up", detail)
+    if turnover_received != turnover_accepted + turnover_refused:
+        detail = f"{file}: {turnover_received} received, {turnover_accepted} accepted, {turnover_refused} refused"
+        raise BrokenInvariant("turnover adds up", detail)
+    days = parts["outlet_days"]["day"]
+    return pl.DataFrame(
+        {
+            "delivery": [delivery.name],
+            "lines_received": [received],
+            "lines_accepted": [accepted],
+            "lines_refused": [refused.height],
+            "turnover_received": [turnover_received],
+            "turnover_accepted": [turnover_accepted],
+            "turnover_refused": [turnover_refused],
+            "first_day": [days.min()],
+            "last_day": [days.max()],
+        },
+        schema=TABLES["totals"].columns,
+    )
+
+
+def _exact_sum(column: pl.Series) -> Decimal:
+    return Decimal(column.sum() or 0)
+
+
+def settle(context: Context, deliveries: Sequence[Delivery]) -> int:
+    """Write `deliveries`: what became of every file; the number of files."""
+    rows = []
+    for feed in context.plan.feed:
+        own = [delivery for delivery in deliveries if delivery.feed.name == feed.name]
+        for delivery, (status, replaced_by) in zip(own, _statuses(feed, own), strict=True):
+            rows.append(
+                {
+                    "feed": feed.name,
+                    "arrival": delivery.arrival,
+                    "delivery": delivery.name,
+                    "file": delivery.file,
+                    "status": status,
+                    "replaced_by": replaced_by,
+                    "sha256": delivery.sha256,
+                    "bytes": delivery.bytes,
+                }
+            )
+    listed = pl.DataFrame(rows, schema_overrides={"replaced_by": pl.String})
+    names = [path for path in context.workspace.parts("totals", sorted(set(listed["delivery"]))) if path.exists()]
+    totals = pl.read_parquet(names, glob=False)
+    context.workspace.write("deliveries", listed.join(totals, on="delivery", how="left"))
+    return listed.height
+
+
+def _statuses(feed: Feed, deliveries: Sequence[Delivery]) -> list[tuple[str, str | None]]:
+    """Status of each delivery of a feed, and the file that replaces it."""
+    first_of_bytes: dict[str, str] = {}
+    latest: dict[str, tuple[tuple[object, ...], str]] = {}
+    present_names = {delivery.file for delivery in deliveries if delivery.present}
+    for delivery in deliveries:
+        first = first_of_bytes.setdefault(delivery.sha256, delivery.file)
+        if first != delivery.file or (not delivery.present and delivery.file not in present_names):
+            continue
+        what, rank = _replaces(feed, delivery)
+        if what not in latest or rank > latest[what][0]:
+            latest[what] = (rank, delivery.name)
+    files = {delivery.name: delivery.file for delivery in reversed(deliveries)}
+    statuses: list[tuple[str, str | None]] = []
+    for delivery in deliveries:
+        what, _ = _replaces(feed, delivery)
+        winner = latest.get(what, ((), ""))[1]
+        if first_of_bytes[delivery.sha256] != delivery.file:
+            statuses.append(("repeated", first_of_bytes[delivery.sha256]))
+        elif not delivery.present and delivery.file not in present_names:
+            statuses.append(("withdrawn", None))
+        elif winner != delivery.name:
+            statuses.append(("superseded", files[winner]))
+        else:
+            statuses.append(("active", None))
+    return statuses
+
+
+def _replaces(feed: Feed, delivery: Delivery) -> tuple[str, tuple[object, ...]]:
+    """What a delivery stands for, and its rank among deliveries that stand for the same."""
+    name = Path(delivery.file).name
+    if feed.replaces == "same-name":
+        return name, (delivery.arrival,)
+    found = re.search(feed.replaces, name)
+    if found is None:
+        return name, ("", delivery.arrival)
+    version = found.groupdict().get("version") or ""
+    digits = re.sub(r"\d+", lambda number: number[0].rjust(12, "0"), version)
+    return found["what"], (digits, delivery.arrival)
+
+
+def check_gates(context: Context) -> int:
+    """Write `gates`; the number of gates checked."""
+    active = context.active_deliveries()
+    connection = context.connect()
+    offer(connection, "deliveries", context.workspace.read("deliveries"))
+    for table in ("sales", "outlet_days"):
+        offer(connection, table, context.workspace.parts(table, active))
+    offer(connection, "periods", context.periods())
+    offer(connection, "gate_limits", _gate_limits(context.plan))
+    offer(connection, "answers", answers(context.plan))
+    gates = select(connection, "gates")
+    context.workspace.write("gates", gates)
+    return gates.height
+
+
+def _gate_limits(plan: Plan) -> pl.DataFrame:
+    return pl.DataFrame([{"feed": feed.name, **feed.gates.model_dump()} for feed in plan.feed])
+
+
+def answers(plan: Plan) -> pl.DataFrame:
+    """The plan's answers: gate, feed, subject, answered_by, answer."""
+    rows = [(a.gate, a.feed, a.on, a.by, a.why) for a in plan.answer]
+    columns = ("gate", "feed", "subject", "answered_by", "answer")
+    return pl.DataFrame(rows, schema=dict.fromkeys(columns, pl.String), orient="row")

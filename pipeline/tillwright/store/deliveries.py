@@ -1,0 +1,252 @@
+"""Deliveries as they lie on disk, opened for SQL as one relation of roles."""
+
+from __future__ import annotations
+
+import csv
+import gzip
+import hashlib
+from collections.abc import Sequence
+from dataclasses import dataclass
+from pathlib import Path
+from typing import IO, cast
+
+import duckdb
+import polars as pl
+
+from tillwright.errors import UnreadableDeliveries, UnreadableFile
+from tillwright.plan import Feed
+from tillwright.queries import Connection, identifier, literal, offer, select
+
+TEXT_SUFFIXES = (".csv", ".csv.gz")
+DESCRIBING_ROLES = ("description", "brand", "size", "category")
+_OPTIONAL_ROLES = ("outlet", "line_id", *DESCRIBING_ROLES)
+_BLOCK = 1 << 20
+
+
+@dataclass(frozen=True, slots=True)
+class Source:
+    """A delivery as a relation: where its columns come from and of which type they are."""
+
+    relation: str
+    types: dict[str, str]
+    raw: str
+    broken: str
+    line: str
+
+
+def hash_file(path: Path) -> str:
+    """SHA-256 of a file's bytes, as 64 hexadecimal digits."""
+    digest = hashlib.sha256()
+    with path.open("rb") as file:
+        while block := file.read(_BLOCK):
+            digest.update(block)
+    return digest.hexdigest()
+
+
+def open_delivery(connection: Connection, path: Path, feed: Feed, stratum: Sequence[str]) -> None:
+    """Make one delivery readable as `received` and `repeats`.
+
+    `received` has one row per line: line, broken, sold, day, item, outlet, quantity, turnover, less,
+    quantity_given, turnover_given, line_id, stratum, description, brand, size, category, raw. Blank
+    text is null. `day` is the local day of sale; of a weekly line, the week's Thursday.
+
+    Raises
+    ------
+    UnreadableDeliveries : the file is not what its name says, or lacks columns that the plan maps.
+    """
+    try:
+        source = _open_text(path, feed) if _is_text(path) else _open_parquet(connection, path)
+        _check_columns(source, feed)
+        roles = _roles(source, feed, stratum)
+        if _is_text(path):
+            connection.execute(f"create or replace temp table received_text as {roles}")
+            roles = "select * from received_text"
+        connection.execute(f"create or replace temp view received as {roles}")
+        if feed.columns.line_id is None:
+            offer(connection, "repeats", pl.DataFrame(schema={"line_id": pl.String, "first_line": pl.Int64}))
+        else:
+            offer(connection, "repeats", select(connection, "repeats"))
+    except (duckdb.Error, OSError, EOFError, UnicodeError, csv.Error) as error:
+        raise unreadable(path, feed, error) from None
+
+
+def count_lines(connection: Connection) -> int:
+    """Number of lines of the delivery that is open."""
+    row = connection.execute("select count(*) from received").fetchone()
+    return int(row[0]) if row else 0
+
+
+def unreadable(path: Path, feed: Feed, error: Exception) -> UnreadableDeliveries:
+    """The error for a delivery that broke off while being read, its reason in one sentence."""
+    text = str(error)
+    if "unicode" in text.lower() or "encod" in text.lower() or isinstance(error, UnicodeError):
+        reason = f"it is not {feed.encoding} text as the plan says (feed.encoding)"
+    elif _is_text(path):
+        reason = f"it cannot be read as CSV: {_first_sentence(text)}"
+    else:
+        reason = f"it cannot be read as Parquet, is cut off or damaged: {_first_sentence(text)}"
+    return UnreadableDeliveries([UnreadableFile(feed.name, path.name, reason)])
+
+
+def _first_sentence(text: str) -> str:
+    line = text.strip().splitlines()[0] if text.strip() else "no reason given"
+    return line.split(": ", 1)[-1].replace("'" + str(Path.cwd()), "'")
+
+
+def _is_text(path: Path) -> bool:
+    return path.name.lower().endswith(TEXT_SUFFIXES)
+
+
+def _open_parquet(connection: Connection, path: Path) -> Source:
+    relation = f"read_parquet({literal(str(path))}, file_row_number = true)"
+    described = connection.execute(f"describe select * from read_parquet({literal(str(path))})").fetchall()
+    types = {row[0]: row[1] for row in described}
+    members = ", ".join(f"{literal(name)}: {identifier(name)}" for name in types)
+    return Source(relation, types, f"cast(to_json({{{members}}}) as varchar)", "false", "file_row_number + 1")
+
+
+def _open_text(path: Path, feed: Feed) -> Source:
+    """A CSV as one row per physical line, cut into cells in SQL.
+
+    Line by line because a line that does not fit must be kept as it came: readers that cut cells
+    on their own were seen to drop the rest of a file after an unclosed quote.
+    """
+    opener = gzip.open if path.name.lower().endswith(".gz") else open
+    with cast(IO[str], opener(path, "rt", encoding=_codec(feed.encoding), newline="")) as file:
+        names = next(csv.reader(file, delimiter=feed.delimiter), [])
+    if not names:
+        raise csv.Error("it is empty")
+    cut = literal(feed.delimiter)
+    code = f"\\x{{{ord(feed.delimiter):x}}}"
+    pattern = literal(f'{code}("(?:[^"]|"")*"|[^"{code}]*)')
+    cells = (
+        f"case when contains(text, '\"') then regexp_extract_all({cut} || text, {pattern}, 1) "
+        f"else string_split(text, {cut}) end"
+    )
+    named = ", ".join(f"{_unquoted(f'cells[{n + 1}]')} as {identifier(name)}" for n, name in enumerate(names))
+    lines = (
+        f"read_csv({literal(str(path))}, columns = {{'text': 'VARCHAR'}}, header = false, skip = 1, "
+        f"delim = '\\x01', quote = '', escape = '', encoding = {literal(feed.encoding)}, auto_detect = false, "
+        "max_line_size = 16777216)"
+    )
+    relation = (
+        f"(select line, text, {named}, len(cells) <> {len(names)} or array_to_string(cells, {cut}) <> text as broken "
+        f"from (select line, text, {cells} as cells "
+        f"from (select row_number() over () + 1 as line, text from {lines}) where text is not null))"
+    )
+    return Source(relation, dict.fromkeys(names, "VARCHAR"), "text", "broken", "line")
+
+
+def _codec(encoding: str) -> str:
+    return "utf-8-sig" if encoding == "utf-8" else encoding
+
+
+def _unquoted(cell: str) -> str:
+    return f"case when starts_with({cell}, '\"') then replace({cell}[2:-2], '\"\"', '\"') else {cell} end"
+
+
+def _check_columns(source: Source, feed: Feed) -> None:
+    asked = [name for name in feed.columns.model_dump().values() if name is not None]
+    missing = [name for name in dict.fromkeys([*asked, *feed.turnover_less]) if name not in source.types]
+    if missing:
+        names = ", ".join(f"'{name}'" for name in missing)
+        present = ", ".join(f"'{name}'" for name in source.types)
+        raise csv.Error(f"it has no column {names}, which the plan maps; its columns are {present}")
+
+
+def _roles(source: Source, feed: Feed, stratum: Sequence[str]) -> str:
+    """The select that gives a delivery's columns their roles."""
+    columns = feed.columns
+    sold = getattr(columns, columns.date_role)
+    quantity, turnover = _number(columns.quantity, source, feed), _number(columns.turnover, source, feed)
+    less = [_subtracted(name, source, feed) for name in feed.turnover_less]
+    optional = {role: getattr(columns, role) for role in _OPTIONAL_ROLES}
+    parts = [
+        f"{source.line} as line",
+        f"{source.broken} as broken",
+        f"{_present(sold, source)} as sold_given",
+        f"{_day(sold, source, feed)} as day",
+        f"{_present(columns.item, source)} as item",
+        f"{quantity} as quantity",
+        f"{turnover} as turnover",
+        f"{' + '.join(less) or 'cast(0 as decimal(18, 4))'} as less",
+        f"cast({identifier(columns.quantity)} as varchar) as quantity_given",
+        f"cast({identifier(columns.turnover)} as varchar) as turnover_given",
+        f"{_stratum(source, feed, stratum)} as stratum",
+        f"{source.raw} as raw",
+        *(
+            f"{_present(name, source, text=True) if name else 'cast(null as varchar)'} as {role}"
+            for role, name in optional.items()
+        ),
+    ]
+    return f"select {', '.join(parts)} from {source.relation}"
+
+
+def _present(name: str, source: Source, *, text: bool = False) -> str:
+    """A column with blank text as null; `text` casts other types to text."""
+    column = identifier(name)
+    if source.types[name] == "VARCHAR":
+        return f"nullif(trim({column}), '')"
+    return f"cast({column} as varchar)" if text else column
+
+
+def _number(name: str, source: Source, feed: Feed) -> str:
+    present = _present(name, source)
+    if feed.decimal == "," and source.types[name] == "VARCHAR":
+        return f"replace({present}, ',', '.')"
+    return present
+
+
+def _subtracted(name: str, source: Source, feed: Feed) -> str:
+    number = _number(name, source, feed)
+    return f"case when {number} is null then 0 else try_cast({number} as decimal(18, 4)) end"
+
+
+def _stratum(source: Source, feed: Feed, stratum: Sequence[str]) -> str:
+    members = [
+        literal(feed.name)
+        if role == "feed"
+        else f"coalesce({_present(getattr(feed.columns, role), source, text=True)}, '')"
+        for role in stratum
+    ]
+    return f"concat_ws(' / ', {', '.join(members)})" if members else "''"
+
+
+def _day(name: str, source: Source, feed: Feed) -> str:
+    role, kind = feed.columns.date_role, source.types[name]
+    value = _present(name, source)
+    if role == "month":
+        return _day_of_month_role(value, kind)
+    if role == "week" and kind == "VARCHAR":
+        week = f"try_strptime({value} || '-4', ['%G-W%V-%u', '%GW%V-%u'])"
+        return f"cast(coalesce({week}, {_thursday(f'try_cast({value} as date)')}) as date)"
+    day = _local_day(value, kind, feed)
+    return f"cast({_thursday(day)} as date)" if role == "week" else day
+
+
+def _thursday(day: str) -> str:
+    return f"date_trunc('week', {day}) + interval 3 day"
+
+
+def _day_of_month_role(value: str, kind: str) -> str:
+    if kind == "DATE" or kind.startswith("TIMESTAMP"):
+        return f"cast({value} as date)"
+    text = f"cast({value} as varchar)"
+    digits = f"regexp_replace({text}, '^(\\d{{4}})-?(\\d{{2}})$', '\\1-\\2-01')"
+    return f"try_cast({digits} as date)"
+
+
+def _local_day(value: str, kind: str, feed: Feed) -> str:
+    """The outlet's calendar day of a date or time stamp."""
+    zone, stamped = literal(feed.timezone), feed.stamped_in or feed.timezone
+    if kind == "DATE":
+        return value
+    if kind == "TIMESTAMP WITH TIME ZONE":
+        return f"cast(timezone({zone}, {value}) as date)"
+    naive = value if kind.startswith("TIMESTAMP") else f"try_cast({value} as timestamp)"
+    if stamped != feed.timezone:
+        naive = f"timezone({zone}, timezone({literal(stamped)}, {naive}))"
+    if kind != "VARCHAR":
+        return f"cast({naive} as date)"
+    offset = f"regexp_matches({value}, '(Z|[+-]\\d\\d:?\\d*)$') and contains({value}, ':')"
+    return f"cast(case when {offset} then timezone({zone}, try_cast({value} as timestamptz)) else {naive} end as date)"

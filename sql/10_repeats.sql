@@ -1,0 +1,24 @@
+-- name: repeats
+-- meaning: line identifiers that occur more than once in one delivery, and where each occurs first
+-- grain: line_id
+-- reads: received
+-- params:
+with identified_lines as (
+    select
+        line_id,
+        line
+    from received
+    where line_id is not null
+),
+
+counted as (
+    select
+        line_id,
+        min(line) as first_line
+    from identified_lines
+    group by line_id
+    having count(*) > 1
+)
+
+select * from counted
+order by line_id
