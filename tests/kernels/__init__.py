@@ -1,0 +1,1 @@
+"""Tests of the kernels: published figures, loop twins and axioms."""

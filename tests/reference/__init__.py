@@ -1,0 +1,1 @@
+"""Published figures to test against, beside their citations."""
