@@ -1,0 +1,1 @@
+"""The invented retail market behind `sample_parquet/`: its generator and the truth it was made from."""
