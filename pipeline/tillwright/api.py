@@ -111,6 +111,7 @@ def index_frame(
 ) -> pl.DataFrame:
     """Index of any recipe, the first period = 100; what `bilateral` and `multilateral` return."""
     groups = [by] if isinstance(by, str) else list(by or ())
+    _check_columns(groups, [period, product, price, *([quantity] if recipe.needs_quantities else [])])
     panel = _to_polars(frame)
     value = quantity if recipe.needs_quantities else None
     arrays = to_arrays(panel, by=groups, product=product, period=period, price=price, value=value)
@@ -157,6 +158,17 @@ def _to_polars(frame: Any) -> pl.DataFrame:
     except (TypeError, ValueError) as error:
         kind = type(frame).__name__
         raise CallError(f"The panel is a {kind}; give a Polars, pandas or Arrow frame. ({error})") from None
+
+
+def _check_columns(by: Sequence[str], roles: Sequence[str]) -> None:
+    """Every column plays one role, and none is called like a column of the result."""
+    names = [*by, *roles]
+    twice = sorted({name for name in names if names.count(name) > 1})
+    if twice:
+        raise CallError(f"Column '{twice[0]}' is named for more than one of by, period, product, price and quantity.")
+    taken = sorted({"index", "products", "matched"} & {*by, roles[0]})
+    if taken:
+        raise CallError(f"Column '{taken[0]}' would collide with a column of the result; rename it in the panel.")
 
 
 def _check_choice(name: str, found: str, allowed: Sequence[str]) -> None:

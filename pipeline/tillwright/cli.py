@@ -176,7 +176,7 @@ def index_command(
 
     if out.suffix.lower() not in ENDINGS:
         raise CallError(f"--out is '{out}'; its ending says the format and must be one of {', '.join(ENDINGS)}.")
-    frame = _read_panel(panel)
+    frame = _read_panel(panel, (*by, columns["product"]))
     if method in BILATERAL_FORMULAS:
         result = bilateral(frame, method, form=form, by=by, **columns)
     else:
@@ -190,17 +190,16 @@ def index_command(
     return 0
 
 
-def _read_panel(path: Path) -> pl.DataFrame:
+def _read_panel(path: Path, codes: Sequence[str]) -> pl.DataFrame:
+    """A panel file; in a CSV the columns of codes stay text, so that 01.1 and 01.10 remain two."""
     import polars as pl
 
     if not path.is_file():
         raise CallError(f"The panel {path} is not a file.")
     try:
-        return (
-            pl.read_csv(path, infer_schema_length=None)
-            if path.suffix.lower() == ".csv"
-            else pl.read_parquet(path, glob=False)
-        )
+        if path.suffix.lower() != ".csv":
+            return pl.read_parquet(path, glob=False)
+        return pl.read_csv(path, infer_schema_length=None, schema_overrides=dict.fromkeys(codes, pl.String))
     except (OSError, pl.exceptions.PolarsError) as error:
         reason = str(error).strip().splitlines()[0]
         raise DataError(f"The panel {path} cannot be read as Parquet, or as CSV if it ends in .csv: {reason}") from None

@@ -9,6 +9,7 @@
     │   ├── BadPanel                3   a panel that no index can be made of
     │   └── UnconnectedPeriods      3   a window whose periods share no chain of products
     ├── WorkspaceBusy               3   another compile holds the workspace
+    ├── OrchestrationError          3   Prefect failed, not a step of the compile
     └── BrokenInvariant             3   a run-time check failed: a defect, never a result
 
 A message says what, where, how many, and what to do next.  Facts are attributes.
@@ -77,7 +78,10 @@ class UnreadableDeliveries(DataError):
 
     def __init__(self, files: Sequence[UnreadableFile]) -> None:
         self.files = tuple(files)
-        lines = "\n".join(f"  - {f.file} (feed {f.feed}): {f.reason}" for f in self.files)
+        reasons: dict[str, list[str]] = {}
+        for file in self.files:
+            reasons.setdefault(f"(feed {file.feed}): {file.reason}", []).append(file.file)
+        lines = "\n".join(f"  - {_some(names)} {reason}" for reason, names in reasons.items())
         count = len(self.files)
         super().__init__(
             f"{count} deliver{'ies' if count != 1 else 'y'} cannot be read; the others were taken "
@@ -138,6 +142,10 @@ class WorkspaceBusy(TillwrightError):
         )
 
 
+class OrchestrationError(TillwrightError):
+    """Prefect did not start, or broke off between steps; --direct does without it."""
+
+
 class BrokenInvariant(TillwrightError):
     """A run-time check failed. Nothing was written for the stage concerned."""
 
@@ -151,6 +159,11 @@ class BrokenInvariant(TillwrightError):
 
 def _quoted(names: Sequence[str]) -> str:
     return ", ".join(f"'{name}'" for name in names)
+
+
+def _some(names: Sequence[str]) -> str:
+    shown = ", ".join(names[:3])
+    return shown if len(names) <= 3 else f"{shown} and {len(names) - 3} more"
 
 
 def _span(group: Sequence[object]) -> str:

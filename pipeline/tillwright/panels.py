@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 from tillwright.errors import BadPanel, MissingColumns
 
 Array = NDArray[np.float64]
+_SORTS_AS_TIME = r"^\d{4}(-?(0[1-9]|1[0-2])(-?[0-3]\d)?|-?W[0-5]\d|-?Q[1-4])?$"
 
 
 @dataclass(frozen=True, slots=True)
@@ -77,8 +78,12 @@ def to_arrays(
     missing = [name for name in asked if name not in frame.columns]
     if missing:
         raise MissingColumns("The panel", missing, frame.columns)
+    for name in (price, *([] if value is None else [value])):
+        if not frame.schema[name].is_numeric():
+            raise BadPanel(f"Column '{name}' of the panel holds {frame.schema[name]}, not numbers.")
     kept = frame.select(asked).filter(pl.col(price).is_not_null() & pl.col(price).cast(pl.Float64).is_not_nan())
     _check_keys(kept, [*by, product, period])
+    _check_periods(kept[period])
     _check_positive(kept, price, [*by, product, period])
     if value is not None:
         _check_positive(kept, value, [*by, product, period])
@@ -127,9 +132,19 @@ def _check_keys(rows: pl.DataFrame, columns: list[str]) -> None:
             raise BadPanel(f"The panel has {count} priced rows without a value in '{name}'. Fill or drop them.")
 
 
+def _check_periods(periods: pl.Series) -> None:
+    """Text that does not sort as time would give a wrong index without a word."""
+    if periods.dtype != pl.String:
+        return
+    odd = periods.filter(~periods.str.contains(_SORTS_AS_TIME))
+    if len(odd):
+        raise BadPanel(
+            f"Column '{periods.name}' holds '{odd[0]}', and {len(odd)} of {len(periods)} rows like it. A period is a "
+            "date, an integer, or text such as 2024-03, 2024-W07, 2024-Q1 or 2024-03-31, which sorts as time."
+        )
+
+
 def _check_positive(rows: pl.DataFrame, name: str, keys: list[str]) -> None:
-    if not rows.schema[name].is_numeric():
-        raise BadPanel(f"Column '{name}' of the panel holds {rows.schema[name]}, not numbers.")
     number = pl.col(name).cast(pl.Float64)
     bad = rows.filter(~(number.is_finite() & (number > 0)).fill_null(False))
     if bad.height:

@@ -68,6 +68,18 @@ def list_periods(first: date, last: date, kind: PeriodKind) -> list[date]:
     return periods
 
 
+def period_number(day: date, kind: PeriodKind) -> int:
+    """Running number of the period that holds a day, as the query `lines` counts them.
+
+    Months and quarters since the year 0, weeks since Monday 5 January 1970.
+    """
+    if kind == "month":
+        return 12 * day.year + day.month - 1
+    if kind == "quarter":
+        return 4 * day.year + (day.month - 1) // 3
+    return (day - date(1970, 1, 5)).days // 7
+
+
 def year_of(start: date, kind: PeriodKind) -> int:
     """Calendar year of a period; for weeks the ISO year."""
     return start.isocalendar()[0] if kind == "week" else start.year

@@ -111,7 +111,7 @@ _DECLARED = (
     Table(
         "outlet_days",
         1,
-        "accepted lines by outlet and day; weekly lines stand on the week's Thursday",
+        "lines by outlet and day within the announced period; weekly lines stand on the week's Thursday",
         ("delivery", "outlet", "day"),
         {"delivery": pl.String, "feed": pl.String, "outlet": pl.String, "day": pl.Date, "lines": pl.Int64},
         by_delivery=True,

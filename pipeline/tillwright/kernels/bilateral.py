@@ -7,7 +7,7 @@ from typing import Literal
 
 import numpy as np
 
-from tillwright.kernels.pairs import Array, PairSum, make_fields, sums_of_all_pairs, sums_of_rows
+from tillwright.kernels.pairs import Array, Pair, PairSum, sum_all_pairs, sum_listed_pairs
 
 
 def jevons(pair_sum: PairSum) -> Array:
@@ -25,8 +25,8 @@ def dutot(pair_sum: PairSum) -> Array:
     Depends on the units that products are measured in.
     Reference: ILO et al. (2004), Consumer Price Index Manual, ch. 9.
     """
-    logs: Array = np.log(pair_sum("m", "p")) - np.log(pair_sum("p", "m"))
-    return logs
+    ratio: Array = np.log(pair_sum("m", "p") / pair_sum("p", "m"))
+    return ratio
 
 
 def fisher(pair_sum: PairSum) -> Array:
@@ -35,9 +35,10 @@ def fisher(pair_sum: PairSum) -> Array:
     L = Σ p_t q_s / Σ p_s q_s, P = Σ p_t q_t / Σ p_s q_t.
     Reference: ILO et al. (2004), Consumer Price Index Manual, ch. 15.
     """
-    laspeyres = np.log(pair_sum("q", "p")) - np.log(pair_sum("x", "m"))
-    paasche = np.log(pair_sum("m", "x")) - np.log(pair_sum("p", "q"))
-    return 0.5 * (laspeyres + paasche)
+    laspeyres = pair_sum("q", "p") / pair_sum("x", "m")
+    paasche = pair_sum("m", "x") / pair_sum("p", "q")
+    mean: Array = 0.5 * np.log(laspeyres * paasche)
+    return mean
 
 
 def tornqvist(pair_sum: PairSum) -> Array:
@@ -74,10 +75,8 @@ def log_pair_levels(prices: Array, quantities: Array | None, formula: str, *, sp
     NaN where no product is priced in both periods, or beyond `span`; 0 on the diagonal of every
     priced period.
     """
-    field = make_fields(prices, quantities)
-    pair_sum = sums_of_all_pairs(field, span)
-    matched = pair_sum("m", "m") > 0
-    levels = _where_matched(formula, pair_sum, matched)
+    pair_sum = sum_all_pairs(prices, quantities, wanted_pairs(formula), span)
+    levels, matched = _where_matched(formula, pair_sum)
     if span is not None:
         distance = np.abs(np.subtract.outer(np.arange(len(prices)), np.arange(len(prices))))
         levels[distance > span] = np.nan
@@ -118,8 +117,8 @@ def series(
     if priced.size == 0:
         return result
     base = priced[:-1] if form == "chained" else np.full(priced.size - 1, priced[0])
-    pair_sum = sums_of_rows(make_fields(prices, quantities), base, priced[1:])
-    logs = _where_matched(formula, pair_sum, pair_sum("m", "m") > 0)
+    pair_sum = sum_listed_pairs(prices, quantities, wanted_pairs(formula), base, priced[1:])
+    logs, _ = _where_matched(formula, pair_sum)
     if form == "chained":
         logs = np.cumsum(logs)
     result[priced[0]] = 1.0
@@ -127,7 +126,22 @@ def series(
     return result
 
 
-def _where_matched(formula: str, pair_sum: PairSum, matched: np.ndarray) -> Array:
+def wanted_pairs(formula: str) -> list[Pair]:
+    """Sums that a formula asks for, found by letting it ask; the first tells which pairs have a match."""
+    asked: list[Pair] = []
+
+    def note(base: str, current: str) -> Array:
+        asked.append((base, current))
+        return np.ones(1)
+
+    FORMULAS[formula](note)
+    match = ("x", "m") if ("x", "m") in asked else ("m", "m")
+    return [match, *asked]
+
+
+def _where_matched(formula: str, pair_sum: PairSum) -> tuple[Array, np.ndarray]:
+    """Log levels, NaN where no product is in common, and whether one is."""
+    matched = pair_sum(*wanted_pairs(formula)[0]) > 0
     with np.errstate(divide="ignore", invalid="ignore"):
         levels = FORMULAS[formula](pair_sum)
-    return np.where(matched, levels, np.nan)
+    return np.where(matched, levels, np.nan), matched

@@ -61,7 +61,8 @@ def aggregate(levels: Array, years: list[WeightYear], paths: NDArray[np.intp], h
 
     Within a weight year y, R_h(t) = Σ w_i·I_i(t)/I_i(link) / Σ w_i over the components below h, and
     I_h(t) = I_h(link)·R_h(t).  A component without a level at t or at the link takes the R of the
-    nearest heading above it that has one.
+    nearest heading above it that has one, so a heading that is missing for a while comes back at the
+    level that its parent's movement carries it to.
 
     Parameters
     ----------
@@ -78,25 +79,21 @@ def aggregate(levels: Array, years: list[WeightYear], paths: NDArray[np.intp], h
     below = _membership(paths, headings)
     index, weight = np.full((periods, headings), np.nan), np.zeros((periods, headings))
     imputed, steps = np.zeros((periods, headings)), np.zeros((periods, headings))
-    index[0], chain = 1.0, np.ones(headings)
+    reached = np.ones((periods, headings))
     for year in years:
         rows = np.arange(year.first, year.last + 1)
         ratios = levels[rows] / levels[year.link]
         known = np.isfinite(ratios)
         shares = year.weights / year.weights.sum()
-        heading_weight = below @ shares
-        filled = _fill(ratios, known, shares, below, paths)
-        value = np.nan_to_num(filled) * shares
-        totals = value @ below.T
-        chain = index[year.link] if year.first > 0 else chain
-        with np.errstate(divide="ignore", invalid="ignore"):
-            index[rows] = chain * (totals / heading_weight)
-            imputed[rows] = ((~known * shares) @ below.T) / heading_weight
-        index[rows] = np.where((known @ (below * (shares > 0)).T) > 0, index[rows], np.nan)
-        weight[rows] = heading_weight
-        start = (np.where(shares > 0, shares, 0.0) @ below.T)[None, :]
-        steps[rows] = chain[0] * np.diff(totals, axis=0, prepend=start)
-    index[0] = np.where(np.isfinite(index[0]), index[0], np.nan)
+        totals = _fill(ratios, known, shares, below, paths) * shares @ below.T
+        chain = reached[year.link] if year.first > 0 else np.ones(headings)
+        weighs = below @ shares
+        movement = np.divide(totals, weighs, out=np.ones_like(totals), where=weighs > 0)
+        reached[rows] = chain * movement
+        index[rows] = np.where(known @ (below * (shares > 0)).T > 0, reached[rows], np.nan)
+        weight[rows] = weighs
+        np.divide((~known * shares) @ below.T, weighs, out=imputed[rows[0] : rows[-1] + 1], where=weighs > 0)
+        steps[rows] = chain[0] * np.diff(totals, axis=0, prepend=weighs[None, :])
     return Aggregate(index, weight, imputed, np.cumsum(steps, axis=0))
 
 
@@ -108,13 +105,17 @@ def _membership(paths: NDArray[np.intp], headings: int) -> Array:
 
 
 def _fill(ratios: Array, known: NDArray[np.bool_], shares: Array, below: Array, paths: NDArray[np.intp]) -> Array:
-    """Ratios with unknown ones taken from the nearest heading that has any known component."""
+    """Ratios with unknown ones taken from the nearest heading that has any known component.
+
+    Where nothing at all is known, the ratios of the period before stand, or 1 in the first.
+    """
     weighted = np.where(known, ratios, 0.0) * shares
     held = (known * shares) @ below.T
-    with np.errstate(divide="ignore", invalid="ignore"):
-        movement = (weighted @ below.T) / held
+    movement = np.divide(weighted @ below.T, held, out=np.full(held.shape, np.nan), where=held > 0)
     filled = np.where(known, ratios, np.nan)
     for depth in range(paths.shape[1]):
-        candidate = movement[:, paths[:, depth]]
-        filled = np.where(np.isnan(filled), candidate, filled)
+        filled = np.where(np.isnan(filled), movement[:, paths[:, depth]], filled)
+    before = np.ones(filled.shape[1])
+    for row in np.flatnonzero(np.isnan(filled).any(axis=1)):
+        filled[row] = np.where(np.isnan(filled[row]), filled[row - 1] if row else before, filled[row])
     return filled

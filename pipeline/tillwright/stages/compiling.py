@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import hashlib
+import re
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
@@ -61,6 +62,7 @@ def carry_out(request: Request, orchestrate: Orchestrate = in_order) -> Compiled
     """
     context = _prepare(request)
     with Ledger(context.workspace.ledger) as ledger, _recorded(request, context, ledger) as run:
+        context.workspace.sweep()
         deliveries = receive(context.plan, ledger)
         steps = (compile_steps if request.scope == "compile" else intake_steps)(run, deliveries)
         results = orchestrate(context.plan.plan.title, steps)
@@ -76,6 +78,8 @@ def _prepare(request: Request) -> Context:
     plan = read_plan(request.plan)
     references = read_references(plan)
     workspace = workspace_of(request)
+    if not re.fullmatch(r"\d+(\.\d+)? ?[KMGT]i?B", request.memory, flags=re.IGNORECASE):
+        raise CallError(f"--memory is '{request.memory}'; give a size such as 4GB or 800MB.")
     resources = Resources(request.memory, spill=workspace.spill)
     through = None
     if request.through is not None:

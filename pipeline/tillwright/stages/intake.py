@@ -6,12 +6,11 @@ delivery, so a corrected file replaces its own sums and nothing else.
 
 from __future__ import annotations
 
-import math
 import os
 import re
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
-from datetime import date
+from datetime import date, timedelta
 from decimal import Decimal
 from pathlib import Path
 
@@ -19,11 +18,11 @@ import duckdb
 import polars as pl
 
 from tillwright.errors import BrokenInvariant
-from tillwright.periods import parse_any_period
+from tillwright.periods import parse_any_period, period_number
 from tillwright.plan import Feed, Plan
 from tillwright.queries import Connection, define, offer, select
 from tillwright.stages.context import Context
-from tillwright.store.deliveries import DESCRIBING_ROLES, count_lines, hash_file, open_delivery, unreadable
+from tillwright.store.deliveries import DESCRIBING_ROLES, hash_file, open_delivery, unreadable
 from tillwright.store.ledger import Arrival, Ledger
 from tillwright.store.workspace import Workspace
 from tillwright.tables import TABLES
@@ -98,40 +97,30 @@ def take_in(context: Context, connection: Connection, delivery: Delivery) -> int
     BrokenInvariant : lines or turnover do not add up.
     """
     feed, scope, name = delivery.feed, context.plan.plan, delivery.name
-    announced = announced_period(feed, delivery.path.name)
-    unit_price = feed.limits.unit_price or (0.0, math.inf)
+    rules = _rules(delivery)
     open_delivery(connection, delivery.path, feed, context.plan.classification.stratum)
-    define(
-        connection,
-        "lines",
-        period=scope.period,
-        month_rule=scope.month_rule,
-        weeks=scope.weeks,
-        outlet_mapped=feed.columns.outlet is not None,
-        announced_from=announced[0] if announced else None,
-        announced_until=announced[1] if announced else None,
-        unit_price_low=unit_price[0],
-        unit_price_high=unit_price[1],
-        item_code=feed.item_code,
-        returns=feed.returns,
-    )
+    periods = {"period": scope.period, "month_rule": scope.month_rule, "weeks": scope.weeks}
+    define(connection, "lines", **periods, only_period=_only_period(context, delivery), **rules)
+    covered = {name: rules[name] for name in ("outlet_mapped", "announced_from", "announced_until")}
     try:
+        totals = select(connection, "totals", delivery=name)
         tally = select(connection, "tally", delivery=name, feed=feed.name, period=scope.period)
         parts = {
             "sales": tally.filter("accepted").drop("accepted"),
-            "refused": select(connection, "refused", delivery=name, feed=feed.name),
-            "outlet_days": select(connection, "outlet_days", delivery=name, feed=feed.name),
+            "outlet_days": select(connection, "outlet_days", delivery=name, feed=feed.name, **covered),
         }
+        parts["refused"] = pl.DataFrame(schema=TABLES["refused"].columns)
+        if not tally["accepted"].all():
+            parts["refused"] = select(connection, "refused", delivery=name, feed=feed.name, **rules)
         if _describes(feed):
             parts["described"] = select(connection, "described", delivery=name, feed=feed.name)
-        received = count_lines(connection)
     except duckdb.Error as error:
         raise unreadable(delivery.path, feed, error) from None
-    totals = _reconcile(delivery, received, tally, parts)
+    totals = _reconcile(delivery, totals, parts)
     for table, frame in parts.items():
         context.workspace.write(table, frame, name)
     context.workspace.write("totals", totals, name)
-    return received
+    return int(totals["lines_received"][0])
 
 
 def part_files(workspace: Workspace, delivery: Delivery) -> list[Path]:
@@ -152,22 +141,47 @@ def announced_period(feed: Feed, file_name: str) -> tuple[date, date] | None:
         return None
 
 
+def _rules(delivery: Delivery) -> dict[str, str | int | float | bool | date | None]:
+    """The parameters of the refusal rules for one delivery; null switches a rule off."""
+    feed = delivery.feed
+    announced = announced_period(feed, delivery.path.name) or (None, None)
+    low, high = feed.limits.unit_price or (None, None)
+    return {
+        "outlet_mapped": feed.columns.outlet is not None,
+        "announced_from": announced[0],
+        "announced_until": announced[1],
+        "unit_price_low": low,
+        "unit_price_high": high,
+        "returns": feed.returns,
+    }
+
+
+def _only_period(context: Context, delivery: Delivery) -> int | None:
+    """Number of the one period that a delivery's accepted lines can lie in, where its name announces one."""
+    announced = announced_period(delivery.feed, delivery.path.name)
+    if announced is None:
+        return None
+    kind = context.plan.plan.period
+    first, last = (period_number(day, kind) for day in (announced[0], announced[1] - timedelta(days=1)))
+    return first if first == last else None
+
+
 def _describes(feed: Feed) -> bool:
     return any(getattr(feed.columns, role) is not None for role in DESCRIBING_ROLES)
 
 
-def _reconcile(
-    delivery: Delivery, received: int, tally: pl.DataFrame, parts: Mapping[str, pl.DataFrame]
-) -> pl.DataFrame:
-    """The totals of a delivery; its lines and its turnover must add up exactly.
+def _reconcile(delivery: Delivery, totals: pl.DataFrame, parts: Mapping[str, pl.DataFrame]) -> pl.DataFrame:
+    """The totals of a delivery, to which accepted and refused lines and turnover must add up exactly.
 
-    Lines are held against a plain count of the file, and the turnover that the tally puts down as
-    refused against the refused lines as they are kept.
+    The turnover of lines whose amount is no number counts as 0 on both sides.
     """
     sales, refused, file = parts["sales"], parts["refused"], delivery.file
-    accepted = int(sales["lines"].sum())
+    accepted, received = int(sales["lines"].sum()), int(totals["lines"][0])
     turnover_accepted, turnover_refused = _exact_sum(sales["turnover"]), _exact_sum(refused["turnover"])
-    turnover_received = _exact_sum(tally["turnover"])
+    turnover_received = Decimal(totals["turnover"][0])
+    unnamed = refused["rule"].null_count()
+    if unnamed:
+        raise BrokenInvariant("every refused line breaks a rule", f"{file}: {unnamed} lines break none")
     if received != accepted + refused.height:
         detail = f"{file}: {received} received, {accepted} accepted, {refused.height} refused"
         raise BrokenInvariant("lines add up", detail)

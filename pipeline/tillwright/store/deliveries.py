@@ -5,6 +5,7 @@ from __future__ import annotations
 import csv
 import gzip
 import hashlib
+import re
 from collections.abc import Sequence
 from dataclasses import dataclass
 from pathlib import Path
@@ -20,6 +21,7 @@ from tillwright.queries import Connection, identifier, literal, offer, select
 TEXT_SUFFIXES = (".csv", ".csv.gz")
 DESCRIBING_ROLES = ("description", "brand", "size", "category")
 _OPTIONAL_ROLES = ("outlet", "line_id", *DESCRIBING_ROLES)
+_INTEGERS = {"TINYINT", "SMALLINT", "INTEGER", "BIGINT", "UTINYINT", "USMALLINT", "UINTEGER"}
 _BLOCK = 1 << 20
 
 
@@ -44,11 +46,12 @@ def hash_file(path: Path) -> str:
 
 
 def open_delivery(connection: Connection, path: Path, feed: Feed, stratum: Sequence[str]) -> None:
-    """Make one delivery readable as `received` and `repeats`.
+    """Make one delivery readable as `received`, `repeats` and `malformed`.
 
-    `received` has one row per line: line, broken, sold, day, item, outlet, quantity, turnover, less,
-    quantity_given, turnover_given, line_id, stratum, description, brand, size, category, raw. Blank
-    text is null. `day` is the local day of sale; of a weekly line, the week's Thursday.
+    `received` has one row per line: line, broken, sold_given, day, item, outlet, units, amount,
+    non_finite, quantity_given, turnover_given, line_id, stratum, description, brand, size, category,
+    raw. Blank text is null, and so are units and amount that are no numbers. `amount` is turnover less
+    what the feed subtracts. `day` is the local day of sale; of a weekly line, the week's Thursday.
 
     Raises
     ------
@@ -62,18 +65,23 @@ def open_delivery(connection: Connection, path: Path, feed: Feed, stratum: Seque
             connection.execute(f"create or replace temp table received_text as {roles}")
             roles = "select * from received_text"
         connection.execute(f"create or replace temp view received as {roles}")
-        if feed.columns.line_id is None:
-            offer(connection, "repeats", pl.DataFrame(schema={"line_id": pl.String, "first_line": pl.Int64}))
-        else:
-            offer(connection, "repeats", select(connection, "repeats"))
+        offer(connection, "repeats", _repeats(connection, feed))
+        offer(connection, "malformed", _malformed(connection, feed))
     except (duckdb.Error, OSError, EOFError, UnicodeError, csv.Error) as error:
         raise unreadable(path, feed, error) from None
 
 
-def count_lines(connection: Connection) -> int:
-    """Number of lines of the delivery that is open."""
-    row = connection.execute("select count(*) from received").fetchone()
-    return int(row[0]) if row else 0
+def _repeats(connection: Connection, feed: Feed) -> pl.DataFrame:
+    if feed.columns.line_id is None:
+        return pl.DataFrame(schema={"line_id": pl.String, "first_line": pl.Int64})
+    return select(connection, "repeats")
+
+
+def _malformed(connection: Connection, feed: Feed) -> pl.DataFrame:
+    if feed.item_code == "any":
+        kind = connection.execute("describe select item from received").fetchall()[0][1]
+        return pl.DataFrame(schema={"item": pl.String if kind == "VARCHAR" else pl.Int64})
+    return select(connection, "malformed")
 
 
 def unreadable(path: Path, feed: Feed, error: Exception) -> UnreadableDeliveries:
@@ -102,7 +110,7 @@ def _open_parquet(connection: Connection, path: Path) -> Source:
     described = connection.execute(f"describe select * from read_parquet({literal(str(path))})").fetchall()
     types = {row[0]: row[1] for row in described}
     members = ", ".join(f"{literal(name)}: {identifier(name)}" for name in types)
-    return Source(relation, types, f"cast(to_json({{{members}}}) as varchar)", "false", "file_row_number + 1")
+    return Source(relation, types, f"{{{members}}}", "false", "file_row_number + 1")
 
 
 def _open_text(path: Path, feed: Feed) -> Source:
@@ -158,8 +166,6 @@ def _roles(source: Source, feed: Feed, stratum: Sequence[str]) -> str:
     """The select that gives a delivery's columns their roles."""
     columns = feed.columns
     sold = getattr(columns, columns.date_role)
-    quantity, turnover = _number(columns.quantity, source, feed), _number(columns.turnover, source, feed)
-    less = [_subtracted(name, source, feed) for name in feed.turnover_less]
     optional = {role: getattr(columns, role) for role in _OPTIONAL_ROLES}
     parts = [
         f"{source.line} as line",
@@ -167,11 +173,11 @@ def _roles(source: Source, feed: Feed, stratum: Sequence[str]) -> str:
         f"{_present(sold, source)} as sold_given",
         f"{_day(sold, source, feed)} as day",
         f"{_present(columns.item, source)} as item",
-        f"{quantity} as quantity",
-        f"{turnover} as turnover",
-        f"{' + '.join(less) or 'cast(0 as decimal(18, 4))'} as less",
-        f"cast({identifier(columns.quantity)} as varchar) as quantity_given",
-        f"cast({identifier(columns.turnover)} as varchar) as turnover_given",
+        f"{_exact(columns.quantity, source, feed)} as units",
+        f"{_amount(source, feed)} as amount",
+        f"{_non_finite((columns.quantity, columns.turnover), source, feed)} as non_finite",
+        f"{identifier(columns.quantity)} as quantity_given",
+        f"{identifier(columns.turnover)} as turnover_given",
         f"{_stratum(source, feed, stratum)} as stratum",
         f"{source.raw} as raw",
         *(
@@ -197,9 +203,34 @@ def _number(name: str, source: Source, feed: Feed) -> str:
     return present
 
 
-def _subtracted(name: str, source: Source, feed: Feed) -> str:
-    number = _number(name, source, feed)
-    return f"case when {number} is null then 0 else try_cast({number} as decimal(18, 4)) end"
+def _exact(name: str, source: Source, feed: Feed) -> str:
+    """A column as an exact number, null where it is none.
+
+    Decimals of up to four places and integers stay as they are stored, which sums faster than a
+    wider type; all else becomes decimal(18, 4).
+    """
+    kind = source.types[name]
+    narrow = re.fullmatch(r"DECIMAL\((\d+),(\d+)\)", kind)
+    if kind in _INTEGERS or (narrow and int(narrow[1]) <= 18 and int(narrow[2]) <= 4):
+        return identifier(name)
+    exact = f"try_cast({_number(name, source, feed)} as decimal(18, 4))"
+    return exact if source.broken == "false" else f"case when not {source.broken} then {exact} end"
+
+
+def _amount(source: Source, feed: Feed) -> str:
+    """Turnover less the columns to subtract, in which nothing means 0."""
+    amount = _exact(feed.columns.turnover, source, feed)
+    for name in feed.turnover_less:
+        number = _number(name, source, feed)
+        amount += f" - case when {number} is null then 0 else {_exact(name, source, feed)} end"
+    return amount
+
+
+def _non_finite(names: Sequence[str], source: Source, feed: Feed) -> str:
+    """Whether any of the columns holds infinity or not-a-number; false for types that cannot."""
+    loose = [name for name in names if source.types[name] in {"DOUBLE", "FLOAT", "VARCHAR"}]
+    tests = [f"coalesce(not isfinite(try_cast({_number(name, source, feed)} as double)), false)" for name in loose]
+    return " or ".join(tests) or "false"
 
 
 def _stratum(source: Source, feed: Feed, stratum: Sequence[str]) -> str:

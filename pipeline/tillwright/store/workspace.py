@@ -67,6 +67,11 @@ class Workspace:
         write_parquet(conform(name, frame), path)
         return path
 
+    def sweep(self) -> None:
+        """Remove what a killed compile left half written; call it only while holding the ledger."""
+        for partial in self.tables.rglob(".*.part"):
+            partial.unlink(missing_ok=True)
+
     def read(self, name: str) -> pl.DataFrame:
         """A table as a frame."""
         return pl.read_parquet(self.path(name), glob=False)

@@ -1,18 +1,10 @@
 -- name: tally
--- meaning: exact sums of one delivery in one pass: accepted lines by item, and all refused lines as one row
--- grain: accepted, period, counted, stratum, item
+-- meaning: exact sums of the lines of one delivery; the sums of refused lines serve to check the books
+-- grain: accepted, delivery, period, counted, stratum, item
 -- reads: lines
 -- params: delivery, feed, period
 with judged_lines as (
-    select
-        accepted,
-        case when accepted then period_number end as period_number,
-        case when accepted then counted end as counted,
-        case when accepted then stratum end as stratum,
-        case when accepted then item end as item,
-        units,
-        amount
-    from lines
+    select * from lines
 ),
 
 summed as (
@@ -49,4 +41,4 @@ dated as (
 )
 
 select * from dated
-order by accepted, period, counted, stratum, item
+order by accepted, delivery, period, counted, stratum, item
