@@ -1,0 +1,1 @@
+"""Tests of the stages, on small deliveries written for them."""
