@@ -9,13 +9,13 @@ from __future__ import annotations
 import glob
 import re
 import tomllib
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from datetime import date
 from pathlib import Path
 from typing import Annotated, Any, Literal
 from zoneinfo import ZoneInfo
 
-from pydantic import BaseModel, ConfigDict, Field, ValidationError
+from pydantic import BaseModel, ConfigDict, Field, TypeAdapter, ValidationError
 
 from tillwright.choices import (
     BILATERAL_FORMULAS,
@@ -228,7 +228,7 @@ class Answer(_Section):
 
 
 class Plan(_Section):
-    """A whole plan; `folder` is what its relative paths are relative to."""
+    """A whole plan, read from the file `source`."""
 
     plan: Scope
     feed: Annotated[tuple[Feed, ...], Field(min_length=1)]
@@ -241,7 +241,16 @@ class Plan(_Section):
     item_master: tuple[ItemMaster, ...] = ()
     outside_series: tuple[OutsideSeries, ...] = ()
     answer: tuple[Answer, ...] = ()
-    folder: Path
+    source: Annotated[Path, Field(exclude=True)] = Path("plan.toml")
+
+    @property
+    def folder(self) -> Path:
+        """The folder that relative paths are relative to."""
+        return self.source.parent
+
+    def has(self, *sections: str) -> bool:
+        """Whether these sections are usable; one that `examine_plan` found wrong is not."""
+        return all(getattr(self, section) is not None for section in sections)
 
     def resolve(self, relative: str) -> Path:
         """A path of the plan as a path of the file system."""
@@ -249,7 +258,11 @@ class Plan(_Section):
 
     def delivery_files(self, feed: Feed) -> list[Path]:
         """Files of a feed that exist now, sorted by path."""
-        return sorted(Path(found) for found in glob.glob(str(self.resolve(feed.files)), recursive=True))  # noqa: PTH207 - may be absolute
+        found = glob.glob(str(self.resolve(feed.files)), recursive=True)  # noqa: PTH207 - may be absolute
+        return sorted(path for path in map(Path, found) if path.is_file())
+
+
+SECTIONS = tuple(name for name in Plan.model_fields if name != "source")
 
 
 def read_plan(path: Path) -> Plan:
@@ -259,6 +272,19 @@ def read_plan(path: Path) -> Plan:
     ------
     PlanError : with every problem found; no data have been read.
     """
+    plan, problems = examine_plan(path)
+    if problems:
+        raise PlanError(str(path), problems)
+    return plan
+
+
+def examine_plan(path: Path) -> tuple[Plan, list[PlanProblem]]:
+    """What can be made of a plan, and everything wrong with it; a section that is wrong is None.
+
+    Raises
+    ------
+    PlanError : the file cannot be read as TOML.
+    """
     try:
         raw = tomllib.loads(path.read_text(encoding="utf-8"))
     except OSError as error:
@@ -266,15 +292,25 @@ def read_plan(path: Path) -> Plan:
         raise PlanError(str(path), [problem]) from None
     except (tomllib.TOMLDecodeError, UnicodeDecodeError) as error:
         raise PlanError(str(path), [PlanProblem("PLAN", str(error), "a TOML document in UTF-8")]) from None
-    raw.pop("folder", None)
+    problems = [_unknown("source", raw.pop("source"))] if "source" in raw else []
     try:
-        plan = Plan.model_validate({**raw, "folder": path.resolve().parent})
+        plan = Plan.model_validate({**raw, "source": path.resolve()})
     except ValidationError as error:
-        raise PlanError(str(path), [_problem(detail) for detail in error.errors()]) from None
-    problems = [*_scope_problems(plan), *_feed_problems(plan), *_reference_problems(plan)]
-    if problems:
-        raise PlanError(str(path), problems)
-    return plan
+        problems += map(_problem, error.errors())
+        wrong = {str(detail["loc"][0]) for detail in error.errors()}
+        plan = Plan.model_construct(source=path.resolve(), **{name: _salvage(raw, name, wrong) for name in SECTIONS})
+    for check, needs in _CHECKS.items():
+        if plan.has(*needs):
+            problems += check(plan)
+    return plan, problems
+
+
+def _salvage(raw: dict[str, Any], name: str, wrong: set[str]) -> Any:
+    if name in wrong:
+        return None
+    field = Plan.model_fields[name]
+    kind: Any = field.annotation
+    return TypeAdapter(kind).validate_python(raw[name]) if name in raw else field.default
 
 
 def _problem(detail: Any) -> PlanProblem:
@@ -282,9 +318,15 @@ def _problem(detail: Any) -> PlanProblem:
     if detail["type"] == "missing":
         return PlanProblem(key, "nothing", "a value; this key is required")
     if detail["type"] == "extra_forbidden":
-        return PlanProblem(key, f"{detail['input']!r}", "no such key; see the sections of a plan in DEVELOPERS.md")
+        return _unknown(key, detail["input"])
     message = re.sub(r"^Input should be ", "", detail["msg"])
     return PlanProblem(key, f"{detail['input']!r}", message)
+
+
+def _unknown(key: str, found: object) -> PlanProblem:
+    return PlanProblem(
+        key, repr(found), "no such key; the sections and keys of a plan are in pipeline/tillwright/plan.py"
+    )
 
 
 def _scope_problems(plan: Plan) -> Iterator[PlanProblem]:
@@ -323,9 +365,6 @@ def _feed_problems(plan: Plan) -> Iterator[PlanProblem]:
             yield from _pattern_problems(f"{key}.replaces", feed.replaces, "what")
         if feed.limits.unit_price and feed.limits.unit_price[0] > feed.limits.unit_price[1]:
             yield PlanProblem(f"{key}.limits.unit_price", str(list(feed.limits.unit_price)), "lower bound first")
-        for role in plan.classification.stratum:
-            if role != "feed" and getattr(feed.columns, role) is None:
-                yield PlanProblem(f"{key}.columns.{role}", "nothing", "a column, since classification.stratum uses it")
         if not plan.delivery_files(feed):
             yield PlanProblem(f"{key}.files", repr(feed.files), f"a pattern that matches a file below {plan.folder}")
 
@@ -349,26 +388,80 @@ def _pattern_problems(key: str, pattern: str | None, group: str) -> Iterator[Pla
         yield PlanProblem(key, repr(pattern), f"a regular expression with a named group (?P<{group}>…)")
 
 
-def _reference_problems(plan: Plan) -> Iterator[PlanProblem]:
+def _stratum_problems(plan: Plan) -> Iterator[PlanProblem]:
+    for position, feed in enumerate(plan.feed):
+        for role in plan.classification.stratum:
+            if role != "feed" and getattr(feed.columns, role) is None:
+                key = f"feed.{position}.columns.{role}"
+                yield PlanProblem(key, "nothing", "a column, since classification.stratum uses it")
+
+
+def _classification_problems(plan: Plan) -> Iterator[PlanProblem]:
+    yield from _file_problems(plan, "classification.headings", plan.classification.headings)
+    yield from _file_problems(plan, "classification.assignment", plan.classification.assignment)
+
+
+def _weight_problems(plan: Plan) -> Iterator[PlanProblem]:
+    if plan.weights.source == "turnover":
+        return
+    if plan.weights.file is None:
+        yield PlanProblem("weights.file", "nothing", "a CSV file, since weights.source is 'file'")
+    else:
+        yield from _file_problems(plan, "weights.file", plan.weights.file)
+
+
+def _outside_problems(plan: Plan) -> Iterator[PlanProblem]:
+    for number, series in enumerate(plan.outside_series):
+        yield from _file_problems(plan, f"outside_series.{number}.file", series.file)
+
+
+def _master_problems(plan: Plan) -> Iterator[PlanProblem]:
+    for number, master in enumerate(plan.item_master):
+        yield from _file_problems(plan, f"item_master.{number}.file", master.file)
+
+
+def _file_problems(plan: Plan, key: str, name: str) -> Iterator[PlanProblem]:
+    if not plan.resolve(name).is_file():
+        yield PlanProblem(key, repr(name), f"a file below {plan.folder}")
+
+
+def _feed_name_problems(plan: Plan) -> Iterator[PlanProblem]:
     feeds = {feed.name for feed in plan.feed}
     allowed = "one of the feeds " + ", ".join(sorted(feeds))
-    files = [("classification.headings", plan.classification.headings)]
-    files.append(("classification.assignment", plan.classification.assignment))
-    files += [(f"item_master.{n}.file", master.file) for n, master in enumerate(plan.item_master)]
-    files += [(f"outside_series.{n}.file", series.file) for n, series in enumerate(plan.outside_series)]
-    if plan.weights.source == "file":
-        if plan.weights.file is None:
-            yield PlanProblem("weights.file", "nothing", "a CSV file, since weights.source is 'file'")
-        else:
-            files.append(("weights.file", plan.weights.file))
-    for key, name in files:
-        if not plan.resolve(name).is_file():
-            yield PlanProblem(key, repr(name), f"a file below {plan.folder}")
     for number, master in enumerate(plan.item_master):
         if master.feed not in feeds:
             yield PlanProblem(f"item_master.{number}.feed", repr(master.feed), allowed)
     for number, answer in enumerate(plan.answer):
         if answer.feed is not None and answer.feed not in feeds:
             yield PlanProblem(f"answer.{number}.feed", repr(answer.feed), allowed)
-    if plan.screening.extreme != "off" and plan.screening.extreme[0] >= 1 <= plan.screening.extreme[1]:
-        yield PlanProblem("screening.extreme", str(list(plan.screening.extreme)), "a bound below 1, then one above 1")
+
+
+def _answer_problems(plan: Plan) -> Iterator[PlanProblem]:
+    seen = set()
+    for number, answer in enumerate(plan.answer):
+        gate = (answer.gate, answer.feed, answer.on)
+        if gate in seen:
+            yield PlanProblem(
+                f"answer.{number}", f"a second answer to {answer.gate} on {answer.on}", "one answer a gate"
+            )
+        seen.add(gate)
+
+
+def _screening_problems(plan: Plan) -> Iterator[PlanProblem]:
+    extreme = plan.screening.extreme
+    if extreme != "off" and not extreme[0] < 1 < extreme[1]:
+        yield PlanProblem("screening.extreme", str(list(extreme)), "a bound below 1, then one above 1; or 'off'")
+
+
+_CHECKS: dict[Callable[[Plan], Iterator[PlanProblem]], tuple[str, ...]] = {
+    _scope_problems: ("plan",),
+    _feed_problems: ("feed",),
+    _stratum_problems: ("feed", "classification"),
+    _classification_problems: ("classification",),
+    _weight_problems: ("weights",),
+    _outside_problems: ("outside_series",),
+    _master_problems: ("item_master",),
+    _feed_name_problems: ("feed", "item_master", "answer"),
+    _answer_problems: ("answer",),
+    _screening_problems: ("screening",),
+}

@@ -86,7 +86,8 @@ def main() -> None:
     )
     kernel, bridge = seconds["kernel"], seconds["bridge"]
     show(
-        f"GEKS-Törnqvist, {PERIODS} periods, {PRODUCTS:,} products, {panel.height:,} observations, {windows} windows of {WINDOW}",
+        f"GEKS-Törnqvist, {PERIODS} periods, {PRODUCTS:,} products, {panel.height:,} observations, "
+        f"{windows} windows of {WINDOW}",
         [
             ("kernel / its three matrix products", f"{kernel / seconds['products']:.2f}"),
             ("(kernel + bridge) / (products + bridge)", f"{(kernel + bridge) / (seconds['products'] + bridge):.2f}"),

@@ -13,14 +13,13 @@ from pathlib import Path
 import duckdb
 
 from tests.bench.measure import interleave, peak_memory, show
-from tillwright.plan import read_plan
 from tillwright.queries import Resources, connect
 from tillwright.stages.context import Context
 from tillwright.stages.identity import identify
 from tillwright.stages.intake import Delivery, check_gates, settle, take_in
 from tillwright.stages.panel import make_panel
 from tillwright.store.deliveries import hash_file
-from tillwright.store.references import read_references
+from tillwright.store.references import open_plan
 from tillwright.store.workspace import Workspace
 
 ROUNDS = 5
@@ -121,8 +120,8 @@ def panel(plan_file: Path) -> None:
 
 
 def _take(plan_file: Path, work: Path) -> tuple[Context, Delivery]:
-    plan = read_plan(plan_file)
-    context = Context(plan, read_references(plan), Workspace(work), Resources(spill=work / "spill"))
+    plan, references = open_plan(plan_file)
+    context = Context(plan, references, Workspace(work), Resources(spill=work / "spill"))
     feed = plan.feed[0]
     path = plan.delivery_files(feed)[0]
     delivery = Delivery(feed, path, path.name, _hash(path), 1, path.stat().st_size, present=True)

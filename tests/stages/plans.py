@@ -6,14 +6,13 @@ import pytest
 
 from tests.stages.small import Table, write_plan
 from tillwright.errors import PlanError, PlanProblem
-from tillwright.plan import Plan, read_plan
-from tillwright.store.references import References, read_references
+from tillwright.plan import Plan
+from tillwright.store.references import References, open_plan
 
 
 def read(folder: Path, plan: Table | None = None) -> tuple[Plan, References]:
     """A plan and the small files it names."""
-    found = read_plan(write_plan(folder, plan))
-    return found, read_references(found)
+    return open_plan(write_plan(folder, plan))
 
 
 def problems(folder: Path, plan: Table | None = None) -> dict[str, PlanProblem]:

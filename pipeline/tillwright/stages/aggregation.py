@@ -131,7 +131,7 @@ def _weights(context: Context, components: Components, year: int, turnover: pl.D
     listed = context.references.weights.filter(pl.col("year") == year)
     if listed.height == 0:
         problem = PlanProblem("weights.file", f"no weights for {year}", "weights for every year compiled")
-        raise PlanError(str(context.plan.folder), [problem])
+        raise PlanError(str(context.plan.source), [problem])
     given = dict(listed.select("heading", "weight").iter_rows())
     leaves = np.array(components.leaves)
     total = np.array([own[leaves == leaf].sum() for leaf in components.leaves])
@@ -197,7 +197,7 @@ def _scale(plan: Plan, index: Array, periods: pl.Series) -> Array:
         rows = [n for n, day in enumerate(days) if day == wanted]
     if not rows:
         problem = PlanProblem("plan.reference", repr(reference), "a year or period among those compiled")
-        raise PlanError(str(plan.folder), [problem])
+        raise PlanError(str(plan.source), [problem])
     level = index[rows].mean(axis=0)
     known = np.isfinite(index)
     first = index[known.argmax(axis=0), np.arange(index.shape[1])]

@@ -13,14 +13,14 @@ from typing import Literal, TypeAlias
 
 from tillwright.errors import CallError
 from tillwright.periods import EXAMPLES, parse_period
-from tillwright.plan import Plan, read_plan
+from tillwright.plan import Plan
 from tillwright.queries import Resources
 from tillwright.stages.context import Context
 from tillwright.stages.intake import receive
 from tillwright.stages.keyed import Run, StepResult, code_version
 from tillwright.stages.sequence import Step, compile_steps, intake_steps
 from tillwright.store.ledger import Ledger
-from tillwright.store.references import read_references
+from tillwright.store.references import open_plan
 from tillwright.store.workspace import Workspace
 
 Orchestrate: TypeAlias = Callable[[str, Sequence[Step]], list[StepResult]]
@@ -75,8 +75,7 @@ def workspace_of(request: Request) -> Workspace:
 
 
 def _prepare(request: Request) -> Context:
-    plan = read_plan(request.plan)
-    references = read_references(plan)
+    plan, references = open_plan(request.plan)
     workspace = workspace_of(request)
     if not re.fullmatch(r"\d+(\.\d+)? ?[KMGT]i?B", request.memory, flags=re.IGNORECASE):
         raise CallError(f"--memory is '{request.memory}'; give a size such as 4GB or 800MB.")

@@ -9,9 +9,10 @@ import polars as pl
 
 from tillwright.periods import label_period, list_periods, next_period
 from tillwright.plan import Plan
-from tillwright.queries import Connection, Resources, connect
+from tillwright.queries import Connection, Resources, connect, offer
 from tillwright.store.references import References
 from tillwright.store.workspace import Workspace
+from tillwright.tables import TABLES
 
 
 @dataclass(frozen=True, slots=True)
@@ -32,6 +33,13 @@ class Context:
         """Deliveries whose sums count, in order of feed and arrival."""
         deliveries = self.workspace.read("deliveries")
         return deliveries.filter(pl.col("status") == "active")["delivery"].to_list()
+
+    def offer_active(self, connection: Connection, *tables: str) -> None:
+        """Make tables kept by delivery readable, restricted to active deliveries."""
+        active = self.active_deliveries()
+        for table in tables:
+            parts = [path for path in self.workspace.parts(table, active) if path.exists()]
+            offer(connection, table, parts or pl.DataFrame(schema=TABLES[table].columns))
 
     def label(self, period: date) -> str:
         """A period as people write it."""

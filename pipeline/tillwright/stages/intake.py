@@ -14,7 +14,6 @@ from datetime import date, timedelta
 from decimal import Decimal
 from pathlib import Path
 
-import duckdb
 import polars as pl
 
 from tillwright.errors import BrokenInvariant
@@ -22,7 +21,7 @@ from tillwright.periods import parse_any_period, period_number
 from tillwright.plan import Feed, Plan
 from tillwright.queries import Connection, define, offer, select
 from tillwright.stages.context import Context
-from tillwright.store.deliveries import DESCRIBING_ROLES, hash_file, open_delivery, unreadable
+from tillwright.store.deliveries import DESCRIBING_ROLES, hash_file, open_delivery, reading
 from tillwright.store.ledger import Arrival, Ledger
 from tillwright.store.workspace import Workspace
 from tillwright.tables import TABLES
@@ -102,7 +101,7 @@ def take_in(context: Context, connection: Connection, delivery: Delivery) -> int
     periods = {"period": scope.period, "month_rule": scope.month_rule, "weeks": scope.weeks}
     define(connection, "lines", **periods, only_period=_only_period(context, delivery), **rules)
     covered = {name: rules[name] for name in ("outlet_mapped", "announced_from", "announced_until")}
-    try:
+    with reading(delivery.path, feed):
         totals = select(connection, "totals", delivery=name)
         tally = select(connection, "tally", delivery=name, feed=feed.name, period=scope.period)
         parts = {
@@ -114,8 +113,6 @@ def take_in(context: Context, connection: Connection, delivery: Delivery) -> int
             parts["refused"] = select(connection, "refused", delivery=name, feed=feed.name, **rules)
         if _describes(feed):
             parts["described"] = select(connection, "described", delivery=name, feed=feed.name)
-    except duckdb.Error as error:
-        raise unreadable(delivery.path, feed, error) from None
     totals = _reconcile(delivery, totals, parts)
     for table, frame in parts.items():
         context.workspace.write(table, frame, name)

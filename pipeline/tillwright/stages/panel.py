@@ -16,7 +16,7 @@ def make_panel(context: Context) -> int:
     """
     workspace, connection = context.workspace, context.connect()
     periods = context.periods()
-    offer(connection, "sales", workspace.parts("sales", context.active_deliveries()))
+    context.offer_active(connection, "sales")
     offer(connection, "products", workspace.read("products"))
     panel = None
     if periods.height:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import hashlib
 import time
 from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
@@ -156,9 +157,9 @@ def _gate_inputs(context: Context) -> list[str]:
 
 def _identity_inputs(context: Context) -> list[str]:
     plan = context.plan
-    masters = [f"{master.model_dump_json()} {hash_file(plan.resolve(master.file))}" for master in plan.item_master]
+    masters = hashlib.sha256(context.references.masters.write_csv().encode()).hexdigest()
     assignment = context.references.assignment.write_csv()
-    return [*_sold(context, "described"), *masters, assignment, plan.products.model_dump_json()]
+    return [*_sold(context, "described"), masters, assignment, plan.products.model_dump_json()]
 
 
 def _panel_inputs(context: Context) -> list[str]:

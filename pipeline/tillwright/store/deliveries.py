@@ -6,7 +6,8 @@ import csv
 import gzip
 import hashlib
 import re
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
+from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
 from typing import IO, cast
@@ -14,7 +15,7 @@ from typing import IO, cast
 import duckdb
 import polars as pl
 
-from tillwright.errors import UnreadableDeliveries, UnreadableFile
+from tillwright.errors import DataError, UnreadableDeliveries, UnreadableFile
 from tillwright.plan import Feed
 from tillwright.queries import Connection, identifier, literal, offer, select
 
@@ -57,7 +58,7 @@ def open_delivery(connection: Connection, path: Path, feed: Feed, stratum: Seque
     ------
     UnreadableDeliveries : the file is not what its name says, or lacks columns that the plan maps.
     """
-    try:
+    with reading(path, feed):
         source = _open_text(path, feed) if _is_text(path) else _open_parquet(connection, path)
         _check_columns(source, feed)
         roles = _roles(source, feed, stratum)
@@ -67,8 +68,20 @@ def open_delivery(connection: Connection, path: Path, feed: Feed, stratum: Seque
         connection.execute(f"create or replace temp view received as {roles}")
         offer(connection, "repeats", _repeats(connection, feed))
         offer(connection, "malformed", _malformed(connection, feed))
+
+
+@contextmanager
+def reading(path: Path, feed: Feed) -> Iterator[None]:
+    """Turn what goes wrong while a delivery is read into an error about that delivery."""
+    try:
+        yield
+    except duckdb.OutOfMemoryException as error:
+        raise DataError(
+            f"{path.name} (feed {feed.name}) needs more memory than it may use: {_first_sentence(str(error))} "
+            "Give more with --memory, such as --memory 8GB."
+        ) from None
     except (duckdb.Error, OSError, EOFError, UnicodeError, csv.Error) as error:
-        raise unreadable(path, feed, error) from None
+        raise UnreadableDeliveries([UnreadableFile(feed.name, path.name, _reason(path, feed, error))]) from None
 
 
 def _repeats(connection: Connection, feed: Feed) -> pl.DataFrame:
@@ -84,16 +97,13 @@ def _malformed(connection: Connection, feed: Feed) -> pl.DataFrame:
     return select(connection, "malformed")
 
 
-def unreadable(path: Path, feed: Feed, error: Exception) -> UnreadableDeliveries:
-    """The error for a delivery that broke off while being read, its reason in one sentence."""
+def _reason(path: Path, feed: Feed, error: Exception) -> str:
     text = str(error)
     if "unicode" in text.lower() or "encod" in text.lower() or isinstance(error, UnicodeError):
-        reason = f"it is not {feed.encoding} text as the plan says (feed.encoding)"
-    elif _is_text(path):
-        reason = f"it cannot be read as CSV: {_first_sentence(text)}"
-    else:
-        reason = f"it cannot be read as Parquet, is cut off or damaged: {_first_sentence(text)}"
-    return UnreadableDeliveries([UnreadableFile(feed.name, path.name, reason)])
+        return f"it is not {feed.encoding} text as the plan says (feed.encoding)"
+    if _is_text(path):
+        return f"it cannot be read as CSV: {_first_sentence(text)}"
+    return f"it cannot be read as Parquet, is cut off or damaged: {_first_sentence(text)}"
 
 
 def _first_sentence(text: str) -> str:

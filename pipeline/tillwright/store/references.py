@@ -14,7 +14,14 @@ import polars as pl
 
 from tillwright.errors import PlanError, PlanProblem
 from tillwright.periods import parse_period
-from tillwright.plan import ItemMaster, Plan
+from tillwright.plan import Plan, examine_plan
+
+_NO_TEXT = pl.lit(None, pl.String)
+_EMPTY_WEIGHTS = pl.DataFrame(schema={"year": pl.Int64, "heading": pl.String, "weight": pl.Float64})
+_EMPTY_OUTSIDE = pl.DataFrame(schema={"heading": pl.String, "period": pl.Date, "index": pl.Float64})
+_EMPTY_MASTERS = pl.DataFrame(
+    schema=dict.fromkeys(("feed", "item", "description", "brand", "size", "category", "attributes"), pl.String)
+)
 
 
 @dataclass(frozen=True, slots=True)
@@ -38,96 +45,113 @@ class References:
     """All small files of a plan.
 
     assignment: feed (null = any), category, item, ea. weights: year, heading, weight; empty where weights
-    come from turnover. outside: heading, period (first day), index.
+    come from turnover. outside: heading, period (first day), index. masters: feed, item, description,
+    brand, size, category, attributes (a JSON text).
     """
 
     tree: Tree
     assignment: pl.DataFrame
     weights: pl.DataFrame
     outside: pl.DataFrame
+    masters: pl.DataFrame
 
 
-def read_references(plan: Plan) -> References:
-    """The plan's small files.
+def open_plan(path: Path) -> tuple[Plan, References]:
+    """A plan and the small files it names.
 
     Raises
     ------
-    PlanError : with every problem found in any of them.
+    PlanError : with every problem found in any of them; no delivery has been opened.
     """
-    problems: list[PlanProblem] = []
-    headings = _read_csv(
-        plan, "classification.headings", plan.classification.headings, "heading,parent,label", problems
-    )
-    assignment = _read_csv(plan, "classification.assignment", plan.classification.assignment, "ea", problems)
-    weights = pl.DataFrame(schema={"year": pl.Int64, "heading": pl.String, "weight": pl.Float64})
-    if plan.weights.source == "file" and plan.weights.file is not None:
-        weights = _numbers(
-            _read_csv(plan, "weights.file", plan.weights.file, "year,heading,weight", problems),
-            {"year": pl.Int64, "weight": pl.Float64},
-            "weights.file",
-            problems,
-        )
-    outside = _read_outside(plan, problems)
-    if problems:
-        raise PlanError(str(plan.folder), problems)
-    tree = _make_tree(headings)
-    problems += [*_tree_problems(headings, tree, plan), *_assignment_problems(assignment, tree, plan)]
-    problems += [*_weight_problems(weights, tree, plan), *_outside_problems(outside, tree)]
-    if problems:
-        raise PlanError(str(plan.folder), problems)
+    plan, problems = examine_plan(path)
+    told = {problem.key for problem in problems}
+    references = _read_references(plan, problems, told)
+    if problems or references is None:
+        raise PlanError(str(path), problems)
+    return plan, references
+
+
+def _read_references(plan: Plan, problems: list[PlanProblem], told: set[str]) -> References | None:
+    """The small files; what is wrong with them is added to the problems. None without a tree."""
+    weights, outside, masters = _EMPTY_WEIGHTS, _EMPTY_OUTSIDE, _EMPTY_MASTERS
+    if plan.has("weights") and plan.weights.source == "file" and "weights.file" not in told:
+        weights = _read_weights(plan, problems)
+    if plan.has("outside_series", "plan"):
+        parts = [_read_outside(plan, number, problems, told) for number in range(len(plan.outside_series))]
+        outside = pl.concat([outside, *parts])
+    if plan.has("item_master"):
+        parts = [_read_master(plan, number, problems, told) for number in range(len(plan.item_master))]
+        masters = pl.concat([masters, *parts]).unique(["feed", "item"], keep="last", maintain_order=True)
+    tree, assignment = _read_classification(plan, problems, told)
+    leaves = None if tree is None else set(tree.leaves)
+    problems += [*_weight_problems(weights, leaves), *_outside_problems(outside, leaves)]
+    if assignment is not None:
+        problems += _assignment_problems(assignment, leaves, plan)
+    if tree is None or assignment is None:
+        return None
+    problems += _override_problems(tree, plan)
     for optional in ("feed", "category", "item"):
         if optional not in assignment.columns:
-            assignment = assignment.with_columns(pl.lit(None, pl.String).alias(optional))
-    return References(tree, assignment.select("feed", "category", "item", "ea"), weights, outside)
+            assignment = assignment.with_columns(_NO_TEXT.alias(optional))
+    return References(tree, assignment.select("feed", "category", "item", "ea"), weights, outside, masters)
 
 
-def read_master(plan: Plan, master: ItemMaster) -> pl.DataFrame:
-    """An item master: feed, item, description, brand, size, category, attributes (a JSON text).
+def _read_classification(
+    plan: Plan, problems: list[PlanProblem], told: set[str]
+) -> tuple[Tree | None, pl.DataFrame | None]:
+    """The tree and the assignment, None for one that cannot be used."""
+    if not plan.has("classification"):
+        return None, None
+    tree, assignment, names = None, None, plan.classification
+    if "classification.headings" not in told:
+        headings = _read_csv(plan, "classification.headings", names.headings, "heading,parent,label", problems)
+        if headings is not None:
+            wrong = list(_heading_problems(headings))
+            problems += wrong
+            tree = None if wrong else _make_tree(headings)
+    if "classification.assignment" not in told:
+        assignment = _read_csv(plan, "classification.assignment", names.assignment, "ea", problems)
+    return tree, assignment
 
-    Raises
-    ------
-    PlanError : the file cannot be read, lacks a mapped column, or names an item twice.
-    """
+
+def _read_master(plan: Plan, number: int, problems: list[PlanProblem], told: set[str]) -> pl.DataFrame:
+    """One item master, empty where it cannot be used."""
+    master, key = plan.item_master[number], f"item_master.{number}.file"
+    if key in told:
+        return _EMPTY_MASTERS
     path = plan.resolve(master.file)
     try:
-        raw = pl.read_parquet(path) if path.suffix == ".parquet" else pl.read_csv(path, infer_schema=False)
+        raw = pl.read_parquet(path, glob=False) if path.suffix == ".parquet" else pl.read_csv(path, infer_schema=False)
     except (OSError, pl.exceptions.PolarsError) as error:
-        raise _master_error(plan, master, str(error).splitlines()[0], "a readable Parquet or CSV file") from None
+        problems.append(PlanProblem(key, f"{master.file}: {str(error).splitlines()[0]}", "a Parquet or CSV file"))
+        return _EMPTY_MASTERS
     mapped = {role: name for role, name in master.columns.model_dump().items() if name is not None}
     missing = [name for name in [*mapped.values(), *master.attributes] if name not in raw.columns]
     if missing:
-        raise _master_error(plan, master, f"no column {', '.join(missing)}", f"columns {', '.join(raw.columns)}")
+        problems.append(PlanProblem(key, f"no column {', '.join(missing)}", f"columns {', '.join(raw.columns)}"))
+        return _EMPTY_MASTERS
     roles = ("item", "description", "brand", "size", "category")
-    text = [
-        pl.col(mapped[role]).cast(pl.String).alias(role) if role in mapped else pl.lit(None, pl.String).alias(role)
-        for role in roles
-    ]
-    attributes = pl.struct(master.attributes).struct.json_encode() if master.attributes else pl.lit(None, pl.String)
-    frame = raw.select(pl.lit(master.feed).alias("feed"), *text, attributes.alias("attributes")).filter(
-        pl.col("item").is_not_null()
-    )
+    text = [(pl.col(mapped[role]).cast(pl.String) if role in mapped else _NO_TEXT).alias(role) for role in roles]
+    attributes = pl.struct(master.attributes).struct.json_encode() if master.attributes else _NO_TEXT
+    frame = raw.select(pl.lit(master.feed).alias("feed"), *text, attributes.alias("attributes"))
+    frame = frame.filter(pl.col("item").is_not_null())
     repeated = frame.height - frame["item"].n_unique()
     if repeated:
-        raise _master_error(plan, master, f"{repeated} rows that repeat an item", "one row per item")
+        problems.append(PlanProblem(key, f"{repeated} rows that repeat an item", "one row per item"))
     return frame
 
 
-def _master_error(plan: Plan, master: ItemMaster, found: str, allowed: str) -> PlanError:
-    return PlanError(str(plan.folder), [PlanProblem(f"item_master.file {master.file}", found, allowed)])
-
-
-def _read_csv(plan: Plan, key: str, name: str, needed: str, problems: list[PlanProblem]) -> pl.DataFrame:
-    columns = needed.split(",")
-    path: Path = plan.resolve(name)
+def _read_csv(plan: Plan, key: str, name: str, needed: str, problems: list[PlanProblem]) -> pl.DataFrame | None:
+    """A CSV file as text without blanks around it; None where it cannot be used."""
     try:
-        frame = pl.read_csv(path, infer_schema=False)
+        frame = pl.read_csv(plan.resolve(name), infer_schema=False)
     except (OSError, pl.exceptions.PolarsError) as error:
         problems.append(PlanProblem(key, f"{name}: {str(error).splitlines()[0]}", "a CSV file in UTF-8"))
-        return pl.DataFrame(schema=dict.fromkeys(columns, pl.String))
-    missing = [column for column in columns if column not in frame.columns]
+        return None
+    missing = [column for column in needed.split(",") if column not in frame.columns]
     if missing:
         problems.append(PlanProblem(key, f"columns {', '.join(frame.columns)} in {name}", f"columns {needed}"))
-        return pl.DataFrame(schema=dict.fromkeys(columns, pl.String))
+        return None
     return frame.select(pl.col(pl.String).str.strip_chars().replace("", None))
 
 
@@ -142,21 +166,31 @@ def _numbers(
     return typed
 
 
-def _read_outside(plan: Plan, problems: list[PlanProblem]) -> pl.DataFrame:
-    parts = [pl.DataFrame(schema={"heading": pl.String, "period": pl.Date, "index": pl.Float64})]
-    for number, series in enumerate(plan.outside_series):
-        key = f"outside_series.{number}.file"
-        raw = _read_csv(plan, key, series.file, "heading,period,index", problems)
-        typed = _numbers(raw, {"index": pl.Float64}, key, problems)
-        days: list[date | None] = []
-        for label in raw["period"]:
-            try:
-                days.append(parse_period(label or "", plan.plan.period))
-            except ValueError as error:
-                problems.append(PlanProblem(key, f"period {label!r}", str(error)))
-                days.append(None)
-        parts.append(typed.with_columns(pl.Series("period", days, pl.Date)).select("heading", "period", "index"))
-    return pl.concat(parts)
+def _read_weights(plan: Plan, problems: list[PlanProblem]) -> pl.DataFrame:
+    raw = _read_csv(plan, "weights.file", plan.weights.file or "", "year,heading,weight", problems)
+    if raw is None:
+        return _EMPTY_WEIGHTS
+    typed = _numbers(raw, {"year": pl.Int64, "weight": pl.Float64}, "weights.file", problems)
+    return typed.select("year", "heading", "weight").drop_nulls()
+
+
+def _read_outside(plan: Plan, number: int, problems: list[PlanProblem], told: set[str]) -> pl.DataFrame:
+    key = f"outside_series.{number}.file"
+    raw = None
+    if key not in told:
+        raw = _read_csv(plan, key, plan.outside_series[number].file, "heading,period,index", problems)
+    if raw is None:
+        return _EMPTY_OUTSIDE
+    typed = _numbers(raw, {"index": pl.Float64}, key, problems)
+    days: list[date | None] = []
+    for label in raw["period"]:
+        try:
+            days.append(parse_period(label or "", plan.plan.period))
+        except ValueError as error:
+            problems.append(PlanProblem(key, f"period {label!r}", str(error)))
+            days.append(None)
+    dated = typed.with_columns(pl.Series("period", days, pl.Date))
+    return dated.select("heading", "period", "index").drop_nulls()
 
 
 def _make_tree(headings: pl.DataFrame) -> Tree:
@@ -166,25 +200,27 @@ def _make_tree(headings: pl.DataFrame) -> Tree:
     return Tree(labels, parents, tuple(sorted(heading for heading in parents if heading not in inner)))
 
 
-def _tree_problems(headings: pl.DataFrame, tree: Tree, plan: Plan) -> Iterator[PlanProblem]:
+def _heading_problems(headings: pl.DataFrame) -> Iterator[PlanProblem]:
     key = "classification.headings"
-    roots = [heading for heading, parent in tree.parents.items() if not parent]
-    if len(roots) != 1:
-        yield PlanProblem(key, f"{len(roots)} headings without a parent", "exactly one, the root")
+    if headings["heading"].null_count():
+        yield PlanProblem(key, f"{headings['heading'].null_count()} rows without a heading", "a code on every row")
+    if headings["parent"].null_count() != 1:
+        yield PlanProblem(key, f"{headings['parent'].null_count()} headings without a parent", "exactly one, the root")
     if headings.height != headings["heading"].n_unique():
         yield PlanProblem(key, "a heading that is listed twice", "each heading once")
-    unknown = sorted(set(tree.parents.values()) - set(tree.parents) - {""})
+    unknown = sorted(set(headings["parent"].drop_nulls()) - set(headings["heading"]))
     if unknown:
         yield PlanProblem(key, f"parents that are no headings: {', '.join(unknown[:5])}", "headings of the same file")
-    elif any(_is_circular(tree.parents, heading) for heading in tree.parents):
+    parents = dict(headings.select("heading", pl.col("parent").fill_null("")).iter_rows())
+    if not unknown and any(_is_circular(parents, heading) for heading in parents if heading):
         yield PlanProblem(key, "headings that are their own ancestors", "a tree")
-    for number, override in enumerate(plan.index.override):
+
+
+def _override_problems(tree: Tree, plan: Plan) -> Iterator[PlanProblem]:
+    for number, override in enumerate(plan.index.override if plan.has("index") else ()):
         if override.heading not in tree.parents:
-            yield PlanProblem(
-                f"index.override.{number}.heading",
-                repr(override.heading),
-                f"a heading of {plan.classification.headings}",
-            )
+            allowed = f"a heading of {plan.classification.headings}"
+            yield PlanProblem(f"index.override.{number}.heading", repr(override.heading), allowed)
 
 
 def _is_circular(parents: dict[str, str], heading: str) -> bool:
@@ -197,16 +233,26 @@ def _is_circular(parents: dict[str, str], heading: str) -> bool:
     return False
 
 
-def _assignment_problems(assignment: pl.DataFrame, tree: Tree, plan: Plan) -> Iterator[PlanProblem]:
+def _unknown(headings: pl.Series, leaves: set[str] | None) -> list[str]:
+    """Headings that are no leaves, in order; none where the tree is not known."""
+    return [] if leaves is None else sorted(set(headings) - leaves)
+
+
+def _assignment_problems(assignment: pl.DataFrame, leaves: set[str] | None, plan: Plan) -> Iterator[PlanProblem]:
     key = "classification.assignment"
-    if not {"category", "item"} & set(assignment.columns):
+    told_by = [name for name in ("category", "item") if name in assignment.columns]
+    if not told_by:
         yield PlanProblem(key, f"columns {', '.join(assignment.columns)}", "a column category or item, and ea")
-    unknown = sorted(set(assignment["ea"].drop_nulls()) - set(tree.leaves))
+        return
+    idle = assignment.filter(pl.all_horizontal(pl.col(told_by).is_null())).height
+    if idle:
+        yield PlanProblem(key, f"{idle} rows without {' and '.join(told_by)}", "something to assign on every row")
+    unknown = _unknown(assignment["ea"].drop_nulls(), leaves)
     if unknown:
         yield PlanProblem(key, f"ea {', '.join(unknown[:5])}", "headings without headings below them")
     if assignment["ea"].null_count():
         yield PlanProblem(key, f"{assignment['ea'].null_count()} rows without ea", "an ea on every row")
-    if "feed" in assignment.columns:
+    if "feed" in assignment.columns and plan.has("feed"):
         odd = sorted(set(assignment["feed"].drop_nulls()) - {feed.name for feed in plan.feed})
         if odd:
             yield PlanProblem(key, f"feed {', '.join(odd[:5])}", "feeds of the plan, or nothing")
@@ -216,11 +262,9 @@ def _assignment_problems(assignment: pl.DataFrame, tree: Tree, plan: Plan) -> It
         yield PlanProblem(key, f"{repeated} rows that repeat a {'/'.join(same)}", "each assigned once")
 
 
-def _weight_problems(weights: pl.DataFrame, tree: Tree, plan: Plan) -> Iterator[PlanProblem]:
-    if plan.weights.source != "file":
-        return
+def _weight_problems(weights: pl.DataFrame, leaves: set[str] | None) -> Iterator[PlanProblem]:
     key = "weights.file"
-    unknown = sorted(set(weights["heading"].drop_nulls()) - set(tree.leaves))
+    unknown = _unknown(weights["heading"], leaves)
     if unknown:
         yield PlanProblem(key, f"heading {', '.join(unknown[:5])}", "headings without headings below them")
     if (weights["weight"] < 0).any() or not weights["weight"].is_finite().all():
@@ -228,7 +272,7 @@ def _weight_problems(weights: pl.DataFrame, tree: Tree, plan: Plan) -> Iterator[
     if weights.height != weights.select("year", "heading").n_unique():
         yield PlanProblem(key, "a heading with two weights in a year", "one weight per year and heading")
     for (year,), part in weights.group_by("year", maintain_order=True):
-        missing = sorted(set(tree.leaves) - set(part["heading"]))
+        missing = sorted((leaves or set()) - set(part["heading"]))
         if missing:
             yield PlanProblem(
                 key, f"no weight in {year} for {', '.join(missing[:5])}", "a weight, or 0, for every leaf"
@@ -237,9 +281,9 @@ def _weight_problems(weights: pl.DataFrame, tree: Tree, plan: Plan) -> Iterator[
             yield PlanProblem(key, f"weights of {year} that sum to {part['weight'].sum()}", "a positive sum")
 
 
-def _outside_problems(outside: pl.DataFrame, tree: Tree) -> Iterator[PlanProblem]:
+def _outside_problems(outside: pl.DataFrame, leaves: set[str] | None) -> Iterator[PlanProblem]:
     key = "outside_series.file"
-    unknown = sorted(set(outside["heading"].drop_nulls()) - set(tree.leaves))
+    unknown = _unknown(outside["heading"], leaves)
     if unknown:
         yield PlanProblem(key, f"heading {', '.join(unknown[:5])}", "headings without headings below them")
     if not outside["index"].is_finite().all() or (outside["index"] <= 0).any():
