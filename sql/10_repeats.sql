@@ -1,5 +1,5 @@
 -- name: repeats
--- meaning: line identifiers that occur more than once in one delivery, and where each occurs first
+-- meaning: identifiers of more than one readable line of one delivery, and where each occurs first
 -- grain: line_id
 -- reads: received
 -- params:
@@ -8,7 +8,13 @@ with identified_lines as (
         line_id,
         line
     from received
-    where line_id is not null
+    where
+        line_id is not null
+        and not broken
+        and item is not null
+        and day is not null
+        and units is not null
+        and amount is not null
 ),
 
 counted as (

@@ -49,8 +49,8 @@ judged as (
             and (outlet is not null or not $outlet_mapped)
             and not non_finite
             and ((units > 0 and amount > 0) or ($returns = 'net' and units < 0 and amount < 0))
-            and ($unit_price_low is null or units < 0 or cast(amount as double) / cast(units as double) >= $unit_price_low)
-            and ($unit_price_high is null or units < 0 or cast(amount as double) / cast(units as double) <= $unit_price_high)
+            and ($unit_price_low is null or cast(amount as double) / cast(units as double) >= $unit_price_low)
+            and ($unit_price_high is null or cast(amount as double) / cast(units as double) <= $unit_price_high)
             and day is not null
             and ($announced_from is null or day >= $announced_from)
             and ($announced_until is null or day < $announced_until)

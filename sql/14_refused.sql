@@ -30,7 +30,7 @@ named as (
                 case when not returned and units <= 0 then 'quantity-not-positive' end,
                 case when not returned and amount <= 0 then 'turnover-not-positive' end,
                 case
-                    when units > 0 and amount > 0 and (unit_price < $unit_price_low or unit_price > $unit_price_high)
+                    when (returned or (units > 0 and amount > 0)) and (unit_price < $unit_price_low or unit_price > $unit_price_high)
                         then 'unit-price-limits'
                 end,
                 case when day < $announced_from or day >= $announced_until then 'outside-announced-period' end,

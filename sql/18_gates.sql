@@ -112,7 +112,8 @@ missing_outlets as (
         cast(count(*) filter (where gone_outlets.gone) as double) as measured,
         cast(any_value(limits.missing_outlets) as double) as allowed,
         coalesce(
-            concat('no lines from outlet ', string_agg(gone_outlets.outlet, ', ' order by gone_outlets.outlet) filter (where gone_outlets.gone)),
+            'no lines from outlet '
+            || string_agg(gone_outlets.outlet, ', ' order by gone_outlets.outlet) filter (where gone_outlets.gone),
             'every outlet of the period before'
         ) as note
     from gone_outlets

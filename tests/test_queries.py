@@ -134,7 +134,14 @@ def test_identifier_is_the_name(connection: Connection, name: str) -> None:
 
 
 def test_view_is_defined_with_the_values_it_was_given(connection: Connection) -> None:
-    offer(connection, "received", pl.DataFrame({"line_id": ["x", "x"], "line": [1, 2]}))
+    received = {
+        "line_id": ["x", "x"],
+        "line": [1, 2],
+        "broken": [False] * 2,
+        "item": ["A"] * 2,
+        "day": [date(2024, 3, 1)] * 2,
+    }
+    offer(connection, "received", pl.DataFrame(received | {"units": [1, 1], "amount": [1, 1]}))
     define(connection, "repeats")
     assert connection.execute("select * from repeats").fetchall() == [("x", 1)]
 

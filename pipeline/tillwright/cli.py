@@ -7,6 +7,7 @@ Exit status: 0 done, 1 done but something is held for a decision, 2 the plan or 
 from __future__ import annotations
 
 import json
+import signal
 import sys
 import tempfile
 import traceback
@@ -35,6 +36,8 @@ ENDINGS = (".parquet", ".csv", ".json")
 
 def main() -> None:
     """Run the command and leave with its exit status; never with a traceback."""
+    # Prefect takes SIGTERM for itself; as an exit, what was done so far is recorded first.
+    signal.signal(signal.SIGTERM, lambda *_: sys.exit(143))
     try:
         status = commands.main(standalone_mode=False)
     except click.ClickException as error:

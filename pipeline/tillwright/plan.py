@@ -365,8 +365,19 @@ def _feed_problems(plan: Plan) -> Iterator[PlanProblem]:
             yield from _pattern_problems(f"{key}.replaces", feed.replaces, "what")
         if feed.limits.unit_price and feed.limits.unit_price[0] > feed.limits.unit_price[1]:
             yield PlanProblem(f"{key}.limits.unit_price", str(list(feed.limits.unit_price)), "lower bound first")
-        if not plan.delivery_files(feed):
+        files = plan.delivery_files(feed)
+        if files and feed.announced and not _matches_any(feed.announced, files):
+            allowed = f"a pattern that the name of at least one file has, such as {files[0].name}"
+            yield PlanProblem(f"{key}.announced", repr(feed.announced), allowed)
+        if not files:
             yield PlanProblem(f"{key}.files", repr(feed.files), f"a pattern that matches a file below {plan.folder}")
+
+
+def _matches_any(pattern: str, files: list[Path]) -> bool:
+    try:
+        return any(re.search(pattern, path.name) for path in files)
+    except re.error:
+        return True
 
 
 def _zone_problems(key: str, zone: str | None) -> Iterator[PlanProblem]:

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import os
 import re
-from collections.abc import Mapping, Sequence
+from collections.abc import Collection, Mapping, Sequence
 from dataclasses import dataclass
 from datetime import date, timedelta
 from decimal import Decimal
@@ -16,13 +16,14 @@ from pathlib import Path
 
 import polars as pl
 
-from tillwright.errors import BrokenInvariant
+from tillwright.errors import BrokenInvariant, UnreadableDeliveries, UnreadableFile
 from tillwright.periods import parse_any_period, period_number
 from tillwright.plan import Feed, Plan
 from tillwright.queries import Connection, define, offer, select
 from tillwright.stages.context import Context
-from tillwright.store.deliveries import DESCRIBING_ROLES, hash_file, open_delivery, reading
+from tillwright.store.deliveries import hash_file, open_delivery, reading
 from tillwright.store.ledger import Arrival, Ledger
+from tillwright.store.roles import DESCRIBING_ROLES
 from tillwright.store.workspace import Workspace
 from tillwright.tables import TABLES
 
@@ -128,14 +129,22 @@ def part_files(workspace: Workspace, delivery: Delivery) -> list[Path]:
 
 
 def announced_period(feed: Feed, file_name: str) -> tuple[date, date] | None:
-    """First day and day after the last of the period that a file's name announces, if it does."""
-    found = re.search(feed.announced, file_name) if feed.announced else None
+    """First day and day after the last of the period that a file's name announces; None if it announces none.
+
+    Raises
+    ------
+    UnreadableDeliveries : the period it announces is none, such as 2024-13.
+    """
+    if feed.announced is None:
+        return None
+    found = re.search(feed.announced, file_name)
     if found is None:
         return None
     try:
         return parse_any_period(found["period"])
     except ValueError:
-        return None
+        reason = f"its name announces the period '{found['period']}', which there is not"
+        raise UnreadableDeliveries([UnreadableFile(feed.name, file_name, reason)]) from None
 
 
 def _rules(delivery: Delivery) -> dict[str, str | int | float | bool | date | None]:
@@ -226,37 +235,45 @@ def settle(context: Context, deliveries: Sequence[Delivery]) -> int:
             )
     listed = pl.DataFrame(rows, schema_overrides={"replaced_by": pl.String})
     names = [path for path in context.workspace.parts("totals", sorted(set(listed["delivery"]))) if path.exists()]
-    totals = pl.read_parquet(names, glob=False)
+    totals = pl.read_parquet(names, glob=False) if names else pl.DataFrame(schema=TABLES["totals"].columns)
     context.workspace.write("deliveries", listed.join(totals, on="delivery", how="left"))
     return listed.height
 
 
 def _statuses(feed: Feed, deliveries: Sequence[Delivery]) -> list[tuple[str, str | None]]:
     """Status of each delivery of a feed, and the file that replaces it."""
-    first_of_bytes: dict[str, str] = {}
-    latest: dict[str, tuple[tuple[object, ...], str]] = {}
-    present_names = {delivery.file for delivery in deliveries if delivery.present}
-    for delivery in deliveries:
-        first = first_of_bytes.setdefault(delivery.sha256, delivery.file)
-        if first != delivery.file or (not delivery.present and delivery.file not in present_names):
-            continue
-        what, rank = _replaces(feed, delivery)
-        if what not in latest or rank > latest[what][0]:
-            latest[what] = (rank, delivery.name)
-    files = {delivery.name: delivery.file for delivery in reversed(deliveries)}
-    statuses: list[tuple[str, str | None]] = []
-    for delivery in deliveries:
-        what, _ = _replaces(feed, delivery)
-        winner = latest.get(what, ((), ""))[1]
-        if first_of_bytes[delivery.sha256] != delivery.file:
-            statuses.append(("repeated", first_of_bytes[delivery.sha256]))
-        elif not delivery.present and delivery.file not in present_names:
-            statuses.append(("withdrawn", None))
-        elif winner != delivery.name:
-            statuses.append(("superseded", files[winner]))
-        else:
-            statuses.append(("active", None))
-    return statuses
+    originals: dict[str, Delivery] = {}
+    latest: dict[str, Delivery] = {}
+    present = [delivery for delivery in deliveries if delivery.present]
+    for delivery in present:
+        if originals.setdefault(delivery.sha256, delivery) is delivery:
+            what, rank = _replaces(feed, delivery)
+            if what not in latest or rank > _replaces(feed, latest[what])[1]:
+                latest[what] = delivery
+    files = {delivery.file for delivery in present}
+    return [_status(feed, delivery, originals, latest, files) for delivery in deliveries]
+
+
+def _status(
+    feed: Feed,
+    delivery: Delivery,
+    originals: Mapping[str, Delivery],
+    latest: Mapping[str, Delivery],
+    files: Collection[str],
+) -> tuple[str, str | None]:
+    """active; repeated: the same bytes as another file; superseded; withdrawn: gone and not replaced.
+
+    A file that was overwritten counts as superseded by what holds its name now.
+    """
+    winner = latest.get(_replaces(feed, delivery)[0])
+    if delivery.present and originals[delivery.sha256] is not delivery:
+        return "repeated", originals[delivery.sha256].file
+    if not delivery.present and delivery.file not in files:
+        moved = originals.get(delivery.sha256)
+        return "withdrawn", moved.file if moved else None
+    if winner is delivery:
+        return "active", None
+    return "superseded", winner.file if winner else None
 
 
 def _replaces(feed: Feed, delivery: Delivery) -> tuple[str, tuple[object, ...]]:
@@ -274,11 +291,9 @@ def _replaces(feed: Feed, delivery: Delivery) -> tuple[str, tuple[object, ...]]:
 
 def check_gates(context: Context) -> int:
     """Write `gates`; the number of gates checked."""
-    active = context.active_deliveries()
     connection = context.connect()
     offer(connection, "deliveries", context.workspace.read("deliveries"))
-    for table in ("sales", "outlet_days"):
-        offer(connection, table, context.workspace.parts(table, active))
+    context.offer_active(connection, "sales", "outlet_days")
     offer(connection, "periods", context.periods())
     offer(connection, "gate_limits", _gate_limits(context.plan))
     offer(connection, "answers", answers(context.plan))

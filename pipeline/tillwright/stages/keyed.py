@@ -12,10 +12,11 @@ import hashlib
 import json
 import time
 from collections.abc import Callable, Iterable, Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from functools import cache
 from pathlib import Path
 
+from tillwright.errors import UnreadableFile
 from tillwright.queries import load_queries
 from tillwright.stages.context import Context
 from tillwright.store.deliveries import hash_file
@@ -34,11 +35,12 @@ class StepResult:
 
 @dataclass(frozen=True, slots=True)
 class Run:
-    """A compile under way: what it works on and where it is recorded."""
+    """A compile under way: what it works on, where it is recorded, and the deliveries found unreadable so far."""
 
     context: Context
     ledger: Ledger
     number: int
+    unreadable: list[UnreadableFile] = field(default_factory=list)
 
 
 @dataclass(frozen=True, slots=True)

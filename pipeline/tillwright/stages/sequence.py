@@ -10,7 +10,7 @@ from pathlib import Path
 
 import polars as pl
 
-from tillwright.errors import UnreadableDeliveries, UnreadableFile
+from tillwright.errors import UnreadableDeliveries
 from tillwright.plan import Feed
 from tillwright.stages.aggregation import aggregate_headings
 from tillwright.stages.context import Context
@@ -53,7 +53,7 @@ def intake_steps(run: Run, deliveries: Sequence[Delivery]) -> list[Step]:
         _table_step(
             run,
             "deliveries",
-            lambda: [*listing, *rules, *_hashes(workspace.parts("totals", names))],
+            lambda: [*_all_readable(run), *listing, *rules, *_hashes(workspace.parts("totals", names))],
             ["deliveries"],
             lambda _: settle(context, deliveries),
         ),
@@ -79,6 +79,13 @@ def compile_steps(run: Run, deliveries: Sequence[Delivery]) -> list[Step]:
             context.workspace.headings_csv,
         ),
     ]
+
+
+def _all_readable(run: Run) -> list[str]:
+    """Nothing, or the error for every delivery of the run that could not be read."""
+    if run.unreadable:
+        raise UnreadableDeliveries(run.unreadable)
+    return []
 
 
 def _table_step(
@@ -110,24 +117,21 @@ def _batches(deliveries: Sequence[Delivery]) -> Iterator[list[Delivery]]:
 
 
 def _take_in_batch(run: Run, name: str, batch: Sequence[Delivery]) -> StepResult:
-    """Take in each delivery of a batch that is not taken in yet; unreadable ones are told together."""
+    """Take in each delivery of a batch that is not taken in yet; unreadable ones are noted and told at the end."""
     started = time.monotonic()
     connection = run.context.connect()
     results: list[StepResult] = []
-    broken: list[UnreadableFile] = []
     for delivery in batch:
 
         def take(delivery: Delivery = delivery) -> int:
             return take_in(run.context, connection, delivery)
 
         outputs = part_files(run.context.workspace, delivery)
-        work = Work(f"intake {delivery.name}", _delivery_inputs(run.context, delivery), outputs, take)
         try:
+            work = Work(f"intake {delivery.name}", _delivery_inputs(run.context, delivery), outputs, take)
             results.append(perform(run, work))
         except UnreadableDeliveries as error:
-            broken += error.files
-    if broken:
-        raise UnreadableDeliveries(broken)
+            run.unreadable.extend(error.files)
     rows = sum(result.rows for result in results)
     return StepResult(name, rows, time.monotonic() - started, all(result.unchanged for result in results))
 
