@@ -13,8 +13,8 @@ with given_items as (
 padded as (
     select
         item,
-        regexp_full_match(cast(item as varchar), '[0-9]{8}|[0-9]{12,14}') as well_formed,
-        lpad(cast(item as varchar), 14, '0') as digits
+        regexp_full_match(trim(cast(item as varchar), e' \t\r'), '[0-9]{8}|[0-9]{12,14}') as well_formed,
+        lpad(trim(cast(item as varchar), e' \t\r'), 14, '0') as digits
     from given_items
 ),
 

@@ -11,28 +11,56 @@ assignments as (
     select * from assignment
 ),
 
-candidates as (
+by_item as (
     select
         known_items.feed,
         known_items.item,
         assignments.ea,
-        row_number() over (
-            partition by known_items.feed, known_items.item
-            order by
-                assignments.item is null,
-                assignments.category is null,
-                assignments.feed is null
-        ) as preference
+        assignments.category is null as any_category,
+        assignments.feed is null as any_feed,
+        false as any_item
     from known_items
-    inner join assignments
-        on (assignments.feed is null or known_items.feed = assignments.feed)
-        and (assignments.item is null or known_items.item = assignments.item)
+    inner join assignments on known_items.item = assignments.item
+    where
+        (assignments.feed is null or known_items.feed = assignments.feed)
         and (assignments.category is null or known_items.category = assignments.category)
-        and (assignments.item is not null or assignments.category is not null)
+),
+
+by_category as (
+    select
+        known_items.feed,
+        known_items.item,
+        assignments.ea,
+        false as any_category,
+        assignments.feed is null as any_feed,
+        true as any_item
+    from known_items
+    inner join assignments on known_items.category = assignments.category
+    where
+        assignments.item is null
+        and (assignments.feed is null or known_items.feed = assignments.feed)
+),
+
+candidates as (
+    select * from by_item
+    union all
+    select * from by_category
+),
+
+ranked as (
+    select
+        feed,
+        item,
+        ea,
+        row_number() over (
+            partition by feed, item
+            order by any_item, any_category, any_feed
+        ) as preference
+    from candidates
 ),
 
 chosen as (
-    select * from candidates
+    select * from ranked
     where preference = 1
 ),
 

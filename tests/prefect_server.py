@@ -17,7 +17,7 @@ PATIENCE = 120
 
 
 def clean_environment(**more: str) -> dict[str, str]:
-    """This process's environment without settings of Prefect's; byte code may be written, or each start compiles anew."""
+    """This process's environment without Prefect's settings; byte code may be written, or each start compiles anew."""
     dropped = ("PREFECT_", "PYTHONDONTWRITEBYTECODE")
     return {name: value for name, value in os.environ.items() if not name.startswith(dropped)} | more
 

@@ -82,6 +82,7 @@ def _one(path: Path, select: str, lines: int) -> None:
     seconds = interleave(
         {
             "scan": functools.partial(scan, path),
+            "plain group-by": functools.partial(group, path),
             "to sales": functools.partial(sales, plan),
             "to panel": functools.partial(panel, plan),
         },
@@ -101,6 +102,15 @@ def scan(path: Path) -> None:
     connection.execute(
         f"select count(*), max(day), sum(outlet), max(item), sum(quantity), sum(turnover) from read_parquet('{path}')"
     ).fetchall()
+
+
+def group(path: Path) -> None:
+    """Exact sums by month and item without any rule: what no intake can do without."""
+    connection = connect(Resources())
+    connection.execute(
+        "create temp table sums as select date_trunc('month', day) as period, item, sum(quantity), sum(turnover), count(*) "
+        f"from read_parquet('{path}') group by 1, 2"
+    )
 
 
 def sales(plan_file: Path) -> None:

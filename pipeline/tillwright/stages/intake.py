@@ -104,13 +104,12 @@ def take_in(context: Context, connection: Connection, delivery: Delivery) -> int
     covered = {name: rules[name] for name in ("outlet_mapped", "announced_from", "announced_until")}
     with reading(delivery.path, feed):
         totals = select(connection, "totals", delivery=name)
-        tally = select(connection, "tally", delivery=name, feed=feed.name, period=scope.period)
         parts = {
-            "sales": tally.filter("accepted").drop("accepted"),
+            "sales": select(connection, "sales", delivery=name, feed=feed.name, period=scope.period),
             "outlet_days": select(connection, "outlet_days", delivery=name, feed=feed.name, **covered),
         }
         parts["refused"] = pl.DataFrame(schema=TABLES["refused"].columns)
-        if not tally["accepted"].all():
+        if parts["sales"]["lines"].sum() < totals["lines"][0]:
             parts["refused"] = select(connection, "refused", delivery=name, feed=feed.name, **rules)
         if _describes(feed):
             parts["described"] = select(connection, "described", delivery=name, feed=feed.name)

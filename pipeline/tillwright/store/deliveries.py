@@ -9,11 +9,10 @@ from contextlib import contextmanager
 from pathlib import Path
 
 import duckdb
-import polars as pl
 
 from tillwright.errors import DataError, UnreadableDeliveries, UnreadableFile
 from tillwright.plan import Feed
-from tillwright.queries import Connection, offer, select
+from tillwright.queries import Connection, define, offer, select
 from tillwright.store.roles import select_roles
 from tillwright.store.sources import Source, Unfit, count_text_lines, is_text, open_source
 
@@ -30,7 +29,7 @@ def hash_file(path: Path) -> str:
 
 
 def open_delivery(connection: Connection, path: Path, feed: Feed, stratum: Sequence[str]) -> None:
-    """Make one delivery readable as `received`, `repeats` and `malformed`.
+    """Make one delivery readable as `received`, and as `marked`, which also says what `sql/` marks on its lines.
 
     `received` has one row per line: line, broken, sold_given, day, item, outlet, units, amount,
     non_finite, quantity_given, turnover_given, line_id, stratum, description, brand, size, category,
@@ -50,8 +49,7 @@ def open_delivery(connection: Connection, path: Path, feed: Feed, stratum: Seque
             _check_count(connection, path, feed)
             roles = "select * from received_text"
         connection.execute(f"create or replace temp view received as {roles}")
-        offer(connection, "repeats", _repeats(connection, feed))
-        offer(connection, "malformed", _malformed(connection, feed))
+        _mark(connection, feed)
 
 
 @contextmanager
@@ -68,17 +66,18 @@ def reading(path: Path, feed: Feed) -> Iterator[None]:
         raise UnreadableDeliveries([UnreadableFile(feed.name, path.name, _reason(path, feed, error))]) from None
 
 
-def _repeats(connection: Connection, feed: Feed) -> pl.DataFrame:
-    if feed.columns.line_id is None:
-        return pl.DataFrame(schema={"line_id": pl.String, "first_line": pl.Int64})
-    return select(connection, "repeats")
-
-
-def _malformed(connection: Connection, feed: Feed) -> pl.DataFrame:
-    if feed.item_code == "any":
-        kind = connection.execute("describe select item from received").fetchall()[0][1]
-        return pl.DataFrame(schema={"item": pl.String if kind == "VARCHAR" else pl.Int64})
-    return select(connection, "malformed")
+def _mark(connection: Connection, feed: Feed) -> None:
+    """Define `marked`; without identifiers or GTINs to look up, no line pays for a join."""
+    if feed.columns.line_id is None and feed.item_code == "any":
+        connection.execute(
+            "create or replace temp view marked as "
+            "select *, false as repeated, false as malformed_item_code from received"
+        )
+        return
+    offer(connection, "repeats", select(connection, "repeats"))
+    malformed = select(connection, "malformed")
+    offer(connection, "malformed", malformed if feed.item_code == "gtin" else malformed.clear())
+    define(connection, "marked")
 
 
 def _reason(path: Path, feed: Feed, error: Exception) -> str:

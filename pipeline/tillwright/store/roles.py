@@ -29,7 +29,7 @@ def select_roles(source: Source, feed: Feed, stratum: Sequence[str]) -> str:
         f"{source.broken} as broken",
         f"{_present(sold, source)} as sold_given",
         f"{_day(sold, source, feed)} as day_read",
-        f"{_present(columns.item, source)} as item",
+        f"{_item(columns.item, source)} as item",
         f"{_exact(columns.quantity, source, feed)} as units",
         f"{_amount(source, feed)} as amount",
         f"{_non_finite((columns.quantity, columns.turnover), source, feed)} as non_finite",
@@ -52,6 +52,18 @@ def _present(name: str, source: Source, *, text: bool = False) -> str:
     if source.types[name] == "VARCHAR":
         return f"nullif(trim({column}, e' \\t\\r'), '')"
     return f"cast({column} as varchar)" if text else column
+
+
+def _item(name: str, source: Source) -> str:
+    """An item code, null where blank.
+
+    Only a code that does not begin with a printed character is trimmed line by line; blanks behind a code
+    go when its lines have been summed.
+    """
+    column = identifier(name)
+    if source.types[name] != "VARCHAR":
+        return column
+    return f"case when {column} >= '!' then {column} else nullif(trim({column}, e' \\t\\r'), '') end"
 
 
 def _number(name: str, source: Source, feed: Feed) -> str:

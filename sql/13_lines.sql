@@ -1,29 +1,13 @@
 -- name: lines
--- meaning: every line of one delivery, dated to its period, and whether no rule refuses it
+-- meaning: every line of one delivery, dated to its period; accepted is true where no rule refuses it, else false or null
 -- grain: line
--- reads: received, repeats, malformed
+-- reads: marked
 -- params: period, only_period, month_rule, weeks, outlet_mapped, announced_from, announced_until, unit_price_low, unit_price_high, returns
-with received_lines as (
-    select * from received
-),
-
-repeated_identifiers as (
-    select * from repeats
-),
-
-malformed_items as (
-    select * from malformed
-),
-
-dated as (
+with marked_lines as (
     select
-        received_lines.*,
-        malformed_items.item is not null as malformed_item_code,
-        coalesce(received_lines.line > repeated_identifiers.first_line, false) as repeated,
-        date_trunc('week', received_lines.day) as monday
-    from received_lines
-    left join repeated_identifiers on received_lines.line_id = repeated_identifiers.line_id
-    left join malformed_items on received_lines.item = malformed_items.item
+        *,
+        date_trunc('week', day) as monday
+    from marked
 ),
 
 judged as (
@@ -43,7 +27,7 @@ judged as (
                 month(monday) = month(monday + interval 6 day)
                 and ($month_rule = 'whole-weeks' or (dayofmonth(monday) + 6) // 7 <= $weeks)
         end as counted,
-        coalesce(
+        (
             not broken
             and item is not null
             and (outlet is not null or not $outlet_mapped)
@@ -55,10 +39,9 @@ judged as (
             and ($announced_from is null or day >= $announced_from)
             and ($announced_until is null or day < $announced_until)
             and not malformed_item_code
-            and not repeated,
-            false
+            and not repeated
         ) as accepted
-    from dated
+    from marked_lines
 )
 
 select * from judged

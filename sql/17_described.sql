@@ -12,13 +12,13 @@ summed as (
     select
         $delivery as delivery,
         $feed as feed,
-        cast(item as varchar) as item,
+        trim(cast(item as varchar), e' \t\r') as item,
         max(description) as description,
         max(brand) as brand,
         max(size) as size,
         max(category) as category
     from accepted_lines
-    group by item
+    group by trim(cast(item as varchar), e' \t\r')
 )
 
 select * from summed

@@ -1,15 +1,15 @@
--- name: tally
--- meaning: exact sums of the lines of one delivery; the sums of refused lines serve to check the books
--- grain: accepted, delivery, period, counted, stratum, item
+-- name: sales
+-- meaning: exact sums of the accepted lines of one delivery
+-- grain: delivery, period, counted, stratum, item
 -- reads: lines
 -- params: delivery, feed, period
-with judged_lines as (
+with accepted_lines as (
     select * from lines
+    where accepted
 ),
 
 summed as (
     select
-        accepted,
         period_number,
         counted,
         stratum,
@@ -17,13 +17,12 @@ summed as (
         sum(units) as quantity,
         sum(amount) as turnover,
         count(*) as line_count
-    from judged_lines
-    group by accepted, period_number, counted, stratum, item
+    from accepted_lines
+    group by period_number, counted, stratum, item
 ),
 
 dated as (
     select
-        accepted,
         $delivery as delivery,
         $feed as feed,
         case $period
@@ -33,12 +32,27 @@ dated as (
         end as period,
         counted,
         stratum,
-        cast(item as varchar) as item,
+        trim(cast(item as varchar), e' \t\r') as item,
         quantity,
         turnover,
-        line_count as lines
+        line_count
     from summed
+),
+
+trimmed as (
+    select
+        delivery,
+        feed,
+        period,
+        counted,
+        stratum,
+        item,
+        sum(quantity) as quantity,
+        sum(turnover) as turnover,
+        cast(sum(line_count) as bigint) as lines
+    from dated
+    group by delivery, feed, period, counted, stratum, item
 )
 
-select * from dated
-order by accepted, delivery, period, counted, stratum, item
+select * from trimmed
+order by delivery, period, counted, stratum, item

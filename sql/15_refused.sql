@@ -9,7 +9,7 @@ with refused_lines as (
         cast(amount as double) / cast(units as double) as unit_price,
         $returns = 'net' and coalesce(units < 0 and amount < 0, false) as returned
     from lines
-    where not accepted
+    where accepted is not true
 ),
 
 named as (
