@@ -325,7 +325,7 @@ def _problem(detail: Any) -> PlanProblem:
 
 def _unknown(key: str, found: object) -> PlanProblem:
     return PlanProblem(
-        key, repr(found), "no such key; the sections and keys of a plan are in pipeline/tillwright/plan.py"
+        key, repr(found), "no such key; README.md lists the keys of a plan"
     )
 
 

@@ -108,7 +108,8 @@ def group(path: Path) -> None:
     """Exact sums by month and item without any rule: what no intake can do without."""
     connection = connect(Resources())
     connection.execute(
-        "create temp table sums as select date_trunc('month', day) as period, item, sum(quantity), sum(turnover), count(*) "
+        "create temp table sums as "
+        "select date_trunc('month', day) as period, item, sum(quantity), sum(turnover), count(*) "
         f"from read_parquet('{path}') group by 1, 2"
     )
 
