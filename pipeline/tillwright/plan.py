@@ -324,9 +324,7 @@ def _problem(detail: Any) -> PlanProblem:
 
 
 def _unknown(key: str, found: object) -> PlanProblem:
-    return PlanProblem(
-        key, repr(found), "no such key; README.md lists the keys of a plan"
-    )
+    return PlanProblem(key, repr(found), "no such key; README.md lists the keys of a plan")
 
 
 def _scope_problems(plan: Plan) -> Iterator[PlanProblem]:
