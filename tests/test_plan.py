@@ -12,7 +12,7 @@ from pydantic import ValidationError
 from tests.stages.plans import problems, read
 from tests.stages.small import COLUMNS, HEADINGS, feed, line, put, sections, write_plan
 from tillwright.errors import PlanError
-from tillwright.plan import read_plan
+from tillwright.plan_file import read_plan
 from tillwright.stages.compiling import Request, carry_out
 
 

@@ -1,21 +1,16 @@
-"""The plan: plan.toml read, validated whole, and turned into frozen objects.
+"""The sections of a plan as frozen objects: everything a compile depends on.
 
-Everything a compile depends on is here. Relative paths are relative to the plan's folder. Every
-problem is reported at once, before any data are read.
+`plan_file` reads and checks them.  Relative paths are relative to the plan's folder.
 """
 
 from __future__ import annotations
 
 import glob
-import re
-import tomllib
-from collections.abc import Callable, Iterator
 from datetime import date
 from pathlib import Path
 from typing import Annotated, Any, Literal
-from zoneinfo import ZoneInfo
 
-from pydantic import BaseModel, ConfigDict, Field, TypeAdapter, ValidationError
+from pydantic import BaseModel, ConfigDict, Field
 
 from tillwright.choices import (
     BILATERAL_FORMULAS,
@@ -32,9 +27,8 @@ from tillwright.choices import (
     WeightFormula,
     WeightSource,
 )
-from tillwright.errors import PlanError, PlanProblem
 from tillwright.kernels.methods import Recipe
-from tillwright.periods import parse_period, year_of
+from tillwright.periods import parse_period
 
 DATE_ROLES = ("sold_at", "week", "month")
 Share = Annotated[float, Field(ge=0)]
@@ -260,217 +254,3 @@ class Plan(_Section):
         """Files of a feed that exist now, sorted by path."""
         found = glob.glob(str(self.resolve(feed.files)), recursive=True)  # noqa: PTH207 - may be absolute
         return sorted(path for path in map(Path, found) if path.is_file())
-
-
-SECTIONS = tuple(name for name in Plan.model_fields if name != "source")
-
-
-def read_plan(path: Path) -> Plan:
-    """The plan in a TOML file.
-
-    Raises
-    ------
-    PlanError : with every problem found; no data have been read.
-    """
-    plan, problems = examine_plan(path)
-    if problems:
-        raise PlanError(str(path), problems)
-    return plan
-
-
-def examine_plan(path: Path) -> tuple[Plan, list[PlanProblem]]:
-    """What can be made of a plan, and everything wrong with it; a section that is wrong is None.
-
-    Raises
-    ------
-    PlanError : the file cannot be read as TOML.
-    """
-    try:
-        raw = tomllib.loads(path.read_text(encoding="utf-8"))
-    except OSError as error:
-        problem = PlanProblem("PLAN", f"{path} ({error.strerror})", "a readable plan.toml")
-        raise PlanError(str(path), [problem]) from None
-    except (tomllib.TOMLDecodeError, UnicodeDecodeError) as error:
-        raise PlanError(str(path), [PlanProblem("PLAN", str(error), "a TOML document in UTF-8")]) from None
-    problems = [_unknown("source", raw.pop("source"))] if "source" in raw else []
-    try:
-        plan = Plan.model_validate({**raw, "source": path.resolve()})
-    except ValidationError as error:
-        problems += map(_problem, error.errors())
-        wrong = {str(detail["loc"][0]) for detail in error.errors()}
-        plan = Plan.model_construct(source=path.resolve(), **{name: _salvage(raw, name, wrong) for name in SECTIONS})
-    for check, needs in _CHECKS.items():
-        if plan.has(*needs):
-            problems += check(plan)
-    return plan, problems
-
-
-def _salvage(raw: dict[str, Any], name: str, wrong: set[str]) -> Any:
-    if name in wrong:
-        return None
-    field = Plan.model_fields[name]
-    kind: Any = field.annotation
-    return TypeAdapter(kind).validate_python(raw[name]) if name in raw else field.default
-
-
-def _problem(detail: Any) -> PlanProblem:
-    key = ".".join(str(part) for part in detail["loc"])
-    if detail["type"] == "missing":
-        return PlanProblem(key, "nothing", "a value; this key is required")
-    if detail["type"] == "extra_forbidden":
-        return _unknown(key, detail["input"])
-    message = re.sub(r"^Input should be ", "", detail["msg"])
-    return PlanProblem(key, f"{detail['input']!r}", message)
-
-
-def _unknown(key: str, found: object) -> PlanProblem:
-    return PlanProblem(key, repr(found), "no such key; README.md lists the keys of a plan")
-
-
-def _scope_problems(plan: Plan) -> Iterator[PlanProblem]:
-    scope = plan.plan
-    try:
-        first = scope.first_day
-    except ValueError as error:
-        yield PlanProblem("plan.start", repr(scope.start), str(error))
-        return
-    if scope.reference and not re.fullmatch(r"\d{4}", scope.reference):
-        try:
-            if parse_period(scope.reference, scope.period) < first:
-                yield PlanProblem("plan.reference", repr(scope.reference), f"a year or period from {scope.start} on")
-        except ValueError:
-            yield PlanProblem("plan.reference", repr(scope.reference), f"a year, or a {scope.period}")
-    elif scope.reference and int(scope.reference) < year_of(first, scope.period):
-        yield PlanProblem("plan.reference", repr(scope.reference), f"a year or period from {scope.start} on")
-    if scope.month_rule != "calendar" and scope.period != "month":
-        yield PlanProblem("plan.month_rule", repr(scope.month_rule), "'calendar' unless plan.period is 'month'")
-
-
-def _feed_problems(plan: Plan) -> Iterator[PlanProblem]:
-    names = [feed.name for feed in plan.feed]
-    for position, feed in enumerate(plan.feed):
-        key = f"feed.{position}"
-        if names.count(feed.name) > 1:
-            yield PlanProblem(f"{key}.name", repr(feed.name), "a name that no other feed has")
-        mapped = [role for role in DATE_ROLES if getattr(feed.columns, role)]
-        if len(mapped) != 1:
-            found = " and ".join(mapped) or "none of them"
-            yield PlanProblem(f"{key}.columns", found, f"exactly one of {', '.join(DATE_ROLES)}")
-        for name in ("timezone", "stamped_in"):
-            yield from _zone_problems(f"{key}.{name}", getattr(feed, name))
-        yield from _pattern_problems(f"{key}.announced", feed.announced, "period")
-        if feed.replaces != "same-name":
-            yield from _pattern_problems(f"{key}.replaces", feed.replaces, "what")
-        if feed.limits.unit_price and feed.limits.unit_price[0] > feed.limits.unit_price[1]:
-            yield PlanProblem(f"{key}.limits.unit_price", str(list(feed.limits.unit_price)), "lower bound first")
-        files = plan.delivery_files(feed)
-        if files and feed.announced and not _matches_any(feed.announced, files):
-            allowed = f"a pattern that the name of at least one file has, such as {files[0].name}"
-            yield PlanProblem(f"{key}.announced", repr(feed.announced), allowed)
-        if not files:
-            yield PlanProblem(f"{key}.files", repr(feed.files), f"a pattern that matches a file below {plan.folder}")
-
-
-def _matches_any(pattern: str, files: list[Path]) -> bool:
-    try:
-        return any(re.search(pattern, path.name) for path in files)
-    except re.error:
-        return True
-
-
-def _zone_problems(key: str, zone: str | None) -> Iterator[PlanProblem]:
-    try:
-        ZoneInfo(zone or "UTC")
-    except (KeyError, ValueError, OSError):
-        yield PlanProblem(key, repr(zone), "a time zone of the IANA database, such as 'Europe/Lisbon'")
-
-
-def _pattern_problems(key: str, pattern: str | None, group: str) -> Iterator[PlanProblem]:
-    if pattern is None:
-        return
-    try:
-        groups = re.compile(pattern).groupindex
-    except re.error as error:
-        yield PlanProblem(key, repr(pattern), f"a regular expression ({error})")
-        return
-    if group not in groups:
-        yield PlanProblem(key, repr(pattern), f"a regular expression with a named group (?P<{group}>…)")
-
-
-def _stratum_problems(plan: Plan) -> Iterator[PlanProblem]:
-    for position, feed in enumerate(plan.feed):
-        for role in plan.classification.stratum:
-            if role != "feed" and getattr(feed.columns, role) is None:
-                key = f"feed.{position}.columns.{role}"
-                yield PlanProblem(key, "nothing", "a column, since classification.stratum uses it")
-
-
-def _classification_problems(plan: Plan) -> Iterator[PlanProblem]:
-    yield from _file_problems(plan, "classification.headings", plan.classification.headings)
-    yield from _file_problems(plan, "classification.assignment", plan.classification.assignment)
-
-
-def _weight_problems(plan: Plan) -> Iterator[PlanProblem]:
-    if plan.weights.source == "turnover":
-        return
-    if plan.weights.file is None:
-        yield PlanProblem("weights.file", "nothing", "a CSV file, since weights.source is 'file'")
-    else:
-        yield from _file_problems(plan, "weights.file", plan.weights.file)
-
-
-def _outside_problems(plan: Plan) -> Iterator[PlanProblem]:
-    for number, series in enumerate(plan.outside_series):
-        yield from _file_problems(plan, f"outside_series.{number}.file", series.file)
-
-
-def _master_problems(plan: Plan) -> Iterator[PlanProblem]:
-    for number, master in enumerate(plan.item_master):
-        yield from _file_problems(plan, f"item_master.{number}.file", master.file)
-
-
-def _file_problems(plan: Plan, key: str, name: str) -> Iterator[PlanProblem]:
-    if not plan.resolve(name).is_file():
-        yield PlanProblem(key, repr(name), f"a file below {plan.folder}")
-
-
-def _feed_name_problems(plan: Plan) -> Iterator[PlanProblem]:
-    feeds = {feed.name for feed in plan.feed}
-    allowed = "one of the feeds " + ", ".join(sorted(feeds))
-    for number, master in enumerate(plan.item_master):
-        if master.feed not in feeds:
-            yield PlanProblem(f"item_master.{number}.feed", repr(master.feed), allowed)
-    for number, answer in enumerate(plan.answer):
-        if answer.feed is not None and answer.feed not in feeds:
-            yield PlanProblem(f"answer.{number}.feed", repr(answer.feed), allowed)
-
-
-def _answer_problems(plan: Plan) -> Iterator[PlanProblem]:
-    seen = set()
-    for number, answer in enumerate(plan.answer):
-        gate = (answer.gate, answer.feed, answer.on)
-        if gate in seen:
-            yield PlanProblem(
-                f"answer.{number}", f"a second answer to {answer.gate} on {answer.on}", "one answer a gate"
-            )
-        seen.add(gate)
-
-
-def _screening_problems(plan: Plan) -> Iterator[PlanProblem]:
-    extreme = plan.screening.extreme
-    if extreme != "off" and not extreme[0] < 1 < extreme[1]:
-        yield PlanProblem("screening.extreme", str(list(extreme)), "a bound below 1, then one above 1; or 'off'")
-
-
-_CHECKS: dict[Callable[[Plan], Iterator[PlanProblem]], tuple[str, ...]] = {
-    _scope_problems: ("plan",),
-    _feed_problems: ("feed",),
-    _stratum_problems: ("feed", "classification"),
-    _classification_problems: ("classification",),
-    _weight_problems: ("weights",),
-    _outside_problems: ("outside_series",),
-    _master_problems: ("item_master",),
-    _feed_name_problems: ("feed", "item_master", "answer"),
-    _answer_problems: ("answer",),
-    _screening_problems: ("screening",),
-}

@@ -14,7 +14,8 @@ import polars as pl
 
 from tillwright.errors import PlanError, PlanProblem
 from tillwright.periods import parse_period
-from tillwright.plan import Plan, examine_plan
+from tillwright.plan import Plan
+from tillwright.plan_file import examine_plan
 
 _NO_TEXT = pl.lit(None, pl.String)
 _EMPTY_WEIGHTS = pl.DataFrame(schema={"year": pl.Int64, "heading": pl.String, "weight": pl.Float64})
