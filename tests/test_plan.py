@@ -47,6 +47,7 @@ def test_valid_plan_has_the_careful_defaults(folder: Path) -> None:
 
 
 def test_every_key_of_the_contract_is_accepted(folder: Path) -> None:
+    put(folder / "in" / "a_202403.csv", "named as the feed announces\n")
     put(folder / "items.csv", "code,text\nA,x\n")
     put(folder / "rents.csv", "heading,period,index\nR,2024-01,100\n")
     put(folder / "headings.csv", HEADINGS + "R,0,Rents\n")

@@ -137,7 +137,7 @@ def announced_period(feed: Feed, file_name: str) -> tuple[date, date] | None:
     if feed.announced is None:
         return None
     found = re.search(feed.announced, file_name)
-    if found is None:
+    if found is None or found["period"] is None:
         return None
     try:
         return parse_any_period(found["period"])
