@@ -104,7 +104,7 @@ def test_published_chain_drift_example_comes_out_of_frames() -> None:
     "labels",
     [
         pytest.param([date(2023, 11, 1), date(2023, 12, 1), date(2024, 1, 1), date(2024, 2, 1)], id="date"),
-        pytest.param([datetime(2023, month, 1, 12) for month in (1, 2, 3, 10)], id="stamp"),  # noqa: DTZ001
+        pytest.param([datetime(2023, month, 1, 12) for month in (1, 2, 3, 10)], id="stamp"),
         pytest.param(MONTHS, id="text"),
         pytest.param(["2023-W51", "2023-W52", "2024-W01", "2024-W02"], id="week"),
         pytest.param([202311, 202312, 202401, 202402], id="integer"),

@@ -145,7 +145,7 @@ def test_a_period_without_any_delivery_is_held_and_has_no_index(command: Command
     assert done.return_value == 1
     told = json.loads(done.stdout)
     assert ("turnover-swing", "2024-06") in {(gate["gate"], gate["subject"]) for gate in told["held"]}
-    assert told["all_items"][-1] == {"period": "2024-06", "index": None, "change_1": None, "change_12": None}
+    assert told["all_items"][-1] == {"period": "2024-06", "index": None, "change_period": None, "change_year": None}
 
 
 def test_json_holds_the_figures_of_the_tables(command: Command, small_plan: Path) -> None:
@@ -165,7 +165,7 @@ def test_json_holds_the_figures_of_the_tables(command: Command, small_plan: Path
     assert told["methods"] == {"geks-tornqvist, window 3, mean splice onto published": 2}
     top = pl.read_parquet(tables / "headings.parquet").filter(pl.col("parent") == "").sort("period")
     assert [row["index"] for row in told["all_items"]] == top["index"].to_list()
-    assert [row["change_1"] for row in told["all_items"]] == top["change_1"].to_list()
+    assert [row["change_period"] for row in told["all_items"]] == top["change_period"].to_list()
     assert Path(told["tables"]) == tables
 
 
@@ -182,10 +182,10 @@ def test_the_summary_of_the_sample_holds_the_figures_of_headings_csv(
     }
     exact = workspace.read("headings").filter(pl.col("parent") == "").sort("period")
     for row, unrounded in zip(rows.tail(13).iter_rows(named=True), exact.tail(13).iter_rows(named=True), strict=True):
-        changes = [round_half_up(unrounded[name], 1) for name in ("change_1", "change_12")]
+        changes = [round_half_up(unrounded[name], 1) for name in ("change_period", "change_year")]
         assert shown[row["period"]] == [row["index"], *changes]
         assert [float(change) for change in changes] == pytest.approx(
-            [float(row["change_1"]), float(row["change_12"])], abs=0.0551
+            [float(row["change_period"]), float(row["change_year"])], abs=0.0551
         )
     assert "Nothing had changed" in told.stdout
     assert told.stderr == ""

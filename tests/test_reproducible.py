@@ -184,7 +184,7 @@ def test_a_compile_through_an_earlier_month_has_the_figures_of_the_full_one(
     full = sample.context.workspace
     for table, key, figures in (
         ("ea_indexes", ["ea", "stratum", "period"], ["level", "movement", "matched_share"]),
-        ("headings", ["heading", "period"], ["index", "change_1", "change_12", "contribution_12", "weight"]),
+        ("headings", ["heading", "period"], ["index", "change_period", "change_year", "contribution_year", "weight"]),
     ):
         some, whole = part.read(table), full.read(table)
         assert some["period"].max() == pl.Series(["2024-06-01"]).str.to_date().item()

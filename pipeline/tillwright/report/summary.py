@@ -48,8 +48,8 @@ class PeriodSummary:
 
     period: str
     index: float | None
-    change_1: float | None
-    change_12: float | None
+    change_period: float | None
+    change_year: float | None
 
 
 @dataclass(frozen=True, slots=True)
@@ -177,5 +177,5 @@ def _failed(failures: pl.DataFrame) -> tuple[GateSummary, ...]:
 
 def _all_items(context: Context) -> tuple[PeriodSummary, ...]:
     top = context.workspace.read("headings").filter(pl.col("parent") == "").sort("period").tail(LAST_PERIODS)
-    rows = top.select("period", "index", "change_1", "change_12").iter_rows()
+    rows = top.select("period", "index", "change_period", "change_year").iter_rows()
     return tuple(PeriodSummary(context.label(period), *figures) for period, *figures in rows)

@@ -122,7 +122,7 @@ def _methods(summary: Summary) -> Table:
 def _all_items(summary: Summary) -> Group:
     table = _table("period", "index", "1 period, %", "1 year, %")
     for row in summary.all_items:
-        changes = (round_half_up(figure, 1) for figure in (row.change_1, row.change_12))
+        changes = (round_half_up(figure, 1) for figure in (row.change_period, row.change_year))
         table.add_row(row.period, round_half_up(row.index, summary.rounding), *changes)
     return Group(table, Text("Changes are computed from unrounded levels."))
 

@@ -106,7 +106,7 @@ def _year_month(day: date, plan: Plan) -> tuple[int, int]:
     """Calendar year and month that a period ends in; a week belongs where its Thursday lies."""
     if plan.plan.period == "week":
         thursday = day + timedelta(days=3)
-        return day.isocalendar()[0], thursday.month if thursday.year == day.isocalendar()[0] else 12
+        return thursday.year, thursday.month
     return day.year, day.month + (2 if plan.plan.period == "quarter" else 0)
 
 
@@ -152,10 +152,10 @@ def _frame(context: Context, result: Aggregate, order: list[str], periods: pl.Se
         "index": index,
         "weight": result.weight,
         "imputed_weight": result.imputed,
-        "change_1": percent_change(index, 1),
-        "change_12": percent_change(index, year),
-        "contribution_1": np.where(missing, np.nan, contributions[1]),
-        "contribution_12": np.where(missing, np.nan, contributions[year]),
+        "change_period": percent_change(index, 1),
+        "change_year": percent_change(index, year),
+        "contribution_period": np.where(missing, np.nan, contributions[1]),
+        "contribution_year": np.where(missing, np.nan, contributions[year]),
     }
     frame = pl.DataFrame(
         {
@@ -173,7 +173,9 @@ def _frame(context: Context, result: Aggregate, order: list[str], periods: pl.Se
 def _for_people(context: Context, frame: pl.DataFrame) -> pl.DataFrame:
     """The headings with period labels and rounded figures; decimals are rounded, exact halves up."""
     places = {"index": context.plan.release.rounding, "weight": 6, "imputed_weight": 6}
-    places |= dict.fromkeys(("change_1", "change_12"), 2) | dict.fromkeys(("contribution_1", "contribution_12"), 3)
+    places |= dict.fromkeys(("change_period", "change_year"), 2) | dict.fromkeys(
+        ("contribution_period", "contribution_year"), 3
+    )
     labels = {day: context.label(day) for day in frame["period"].unique()}
     return frame.sort("heading", "period").select(
         "heading",

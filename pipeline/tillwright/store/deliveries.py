@@ -12,8 +12,9 @@ import duckdb
 
 from tillwright.errors import DataError, UnreadableDeliveries, UnreadableFile
 from tillwright.plan import Feed
-from tillwright.queries import Connection, define, offer, select
-from tillwright.store.roles import select_roles
+from tillwright.queries import Connection, define, identifier, offer, select
+from tillwright.store.clock import find_offsets
+from tillwright.store.roles import Offsets, select_roles, utc_stamp
 from tillwright.store.sources import Source, Unfit, count_text_lines, is_text, open_source
 
 _BLOCK = 1 << 20
@@ -43,7 +44,7 @@ def open_delivery(connection: Connection, path: Path, feed: Feed, stratum: Seque
     with reading(path, feed):
         source = open_source(connection, path, feed)
         _check_columns(source, feed)
-        roles = select_roles(source, feed, stratum)
+        roles = select_roles(source, feed, stratum, _offsets(connection, source, feed))
         if is_text(path):
             connection.execute(f"create or replace temp table received_text as {roles}")
             _check_count(connection, path, feed)
@@ -64,6 +65,19 @@ def reading(path: Path, feed: Feed) -> Iterator[None]:
         ) from None
     except (Unfit, duckdb.Error, OSError, EOFError, UnicodeError, csv.Error) as error:
         raise UnreadableDeliveries([UnreadableFile(feed.name, path.name, _reason(path, feed, error))]) from None
+
+
+def _offsets(connection: Connection, source: Source, feed: Feed) -> Offsets:
+    """Offsets of the outlets' zone over the delivery's UTC stamps; None if it has none, or they span too long."""
+    column = getattr(feed.columns, feed.columns.date_role)
+    stamp = utc_stamp(identifier(column), source.types[column], feed)
+    if stamp is None:
+        return None
+    first, last = connection.execute(f"select min({stamp}), max({stamp}) from {source.relation}").fetchall()[0]
+    try:
+        return None if first is None else find_offsets(first, last, feed.timezone)
+    except (ValueError, OverflowError):
+        return None
 
 
 def _mark(connection: Connection, feed: Feed) -> None:

@@ -8,19 +8,26 @@ from __future__ import annotations
 
 import re
 from collections.abc import Sequence
+from datetime import datetime
+from typing import TypeAlias
 
 from tillwright.plan import Feed
 from tillwright.queries import identifier, literal
+from tillwright.store.clock import shift
 from tillwright.store.sources import Source
 
 DESCRIBING_ROLES = ("description", "brand", "size", "category")
 _OPTIONAL_ROLES = ("outlet", "line_id", *DESCRIBING_ROLES)
 _INTEGERS = {"TINYINT", "SMALLINT", "INTEGER", "BIGINT", "UTINYINT", "USMALLINT", "UINTEGER"}
+Offsets: TypeAlias = list[tuple[datetime, int]] | None
 _FIRST_DAY, _LAST_DAY = "date '1900-01-01'", "date '2100-12-31'"
 
 
-def select_roles(source: Source, feed: Feed, stratum: Sequence[str]) -> str:
-    """The select that gives a delivery's columns their roles; see `deliveries.open_delivery` for its columns."""
+def select_roles(source: Source, feed: Feed, stratum: Sequence[str], offsets: Offsets = None) -> str:
+    """The select that gives a delivery's columns their roles; see `deliveries.open_delivery` for its columns.
+
+    `offsets` are those of the outlets' zone over the span of the delivery's UTC stamps, where it has such.
+    """
     columns = feed.columns
     sold = getattr(columns, columns.date_role)
     optional = {role: getattr(columns, role) for role in _OPTIONAL_ROLES}
@@ -28,7 +35,7 @@ def select_roles(source: Source, feed: Feed, stratum: Sequence[str]) -> str:
         f"{source.line} as line",
         f"{source.broken} as broken",
         f"{_present(sold, source)} as sold_given",
-        f"{_day(sold, source, feed)} as day_read",
+        f"{_day(sold, source, feed, offsets)} as day_read",
         f"{_item(columns.item, source)} as item",
         f"{_exact(columns.quantity, source, feed)} as units",
         f"{_amount(source, feed)} as amount",
@@ -113,16 +120,16 @@ def _stratum(source: Source, feed: Feed, stratum: Sequence[str]) -> str:
     return f"concat_ws(' / ', {', '.join(members)})" if members else "''"
 
 
-def _day(name: str, source: Source, feed: Feed) -> str:
+def _day(name: str, source: Source, feed: Feed, offsets: Offsets) -> str:
     role, kind = feed.columns.date_role, source.types[name]
     value = _present(name, source)
     if role == "month":
-        return _day_of_month(value, kind, feed)
+        return _day_of_month(value, kind, feed, offsets)
     if role == "week" and kind == "VARCHAR":
         week = f"try_strptime({value} || '-4', ['%G-W%V-%u', '%GW%V-%u'])"
         real = f"case when strftime({week}, '%GW%V') = replace({value}, '-', '') then {week} end"
         return f"cast(coalesce({real}, {_thursday(f'try_cast({value} as date)')}) as date)"
-    day = _local_day(value, kind, feed)
+    day = _local_day(value, kind, feed, offsets)
     return f"cast({_thursday(day)} as date)" if role == "week" else day
 
 
@@ -130,20 +137,36 @@ def _thursday(day: str) -> str:
     return f"date_trunc('week', {day}) + interval 3 day"
 
 
-def _day_of_month(value: str, kind: str, feed: Feed) -> str:
+def _day_of_month(value: str, kind: str, feed: Feed, offsets: Offsets) -> str:
     if kind == "DATE" or kind.startswith("TIMESTAMP"):
-        return _local_day(value, kind, feed)
+        return _local_day(value, kind, feed, offsets)
     text = f"cast({value} as varchar)"
     digits = f"regexp_replace({text}, '^(\\d{{4}})-?(\\d{{2}})$', '\\1-\\2-01')"
     return f"try_cast({digits} as date)"
 
 
-def _local_day(value: str, kind: str, feed: Feed) -> str:
+def utc_stamp(value: str, kind: str, feed: Feed) -> str | None:
+    """A time stamp column as naive UTC; None if it is no UTC stamp, or the outlets keep UTC."""
+    if feed.timezone == "UTC" or not kind.startswith("TIMESTAMP"):
+        return None
+    if _is_aware(kind):
+        return f"make_timestamp(epoch_us(cast({value} as timestamp with time zone)))"
+    return f"cast({value} as timestamp)" if feed.stamped_in == "UTC" else None
+
+
+def _is_aware(kind: str) -> bool:
+    return kind.startswith("TIMESTAMPTZ") or kind == "TIMESTAMP WITH TIME ZONE"
+
+
+def _local_day(value: str, kind: str, feed: Feed, offsets: Offsets) -> str:
     """The outlet's calendar day of a date or time stamp."""
     zone, stamped = literal(feed.timezone), feed.stamped_in or feed.timezone
     if kind == "DATE":
         return value
-    if kind.startswith("TIMESTAMPTZ") or kind == "TIMESTAMP WITH TIME ZONE":
+    utc = utc_stamp(value, kind, feed)
+    if utc is not None and offsets:
+        return f"cast({shift(utc, offsets)} as date)"
+    if _is_aware(kind):
         return f"cast(timezone({zone}, {value}) as date)"
     naive = value if kind.startswith("TIMESTAMP") else f"try_cast({value} as timestamp)"
     if stamped != feed.timezone:
