@@ -1,7 +1,7 @@
 -- name: gates
 -- meaning: what the active deliveries show against the limits of their feed, with the answers given
 -- grain: gate, feed, subject
--- reads: deliveries, sales, outlet_days, gate_limits, periods, answers
+-- reads: deliveries, sales, outlet_days, replaced_days, gate_limits, periods, answers
 -- params:
 with active_deliveries as (
     select * from deliveries
@@ -55,14 +55,16 @@ turnover_steps as (
         feed_span.feed,
         known_periods.period,
         known_periods.label,
-        coalesce(now.turnover, 0) as turnover,
-        before.turnover as turnover_before
+        coalesce(feed_turnover.turnover, 0) as turnover,
+        last_value(feed_turnover.turnover ignore nulls) over (
+            partition by feed_span.feed
+            order by known_periods.period
+            rows between unbounded preceding and 1 preceding
+        ) as turnover_before
     from feed_span
-    inner join known_periods on feed_span.first_period < known_periods.period
-    left join feed_turnover as now
-        on feed_span.feed = now.feed and known_periods.period = now.period
-    left join feed_turnover as before
-        on feed_span.feed = before.feed and known_periods.previous_period = before.period
+    inner join known_periods on feed_span.first_period <= known_periods.period
+    left join feed_turnover
+        on feed_span.feed = feed_turnover.feed and known_periods.period = feed_turnover.period
 ),
 
 turnover_swing as (
@@ -148,6 +150,33 @@ overlap as (
     group by feed, file
 ),
 
+uncovered_days as (
+    select
+        replaced_days.feed,
+        regexp_replace(deliveries.file, '^.*/', '') as subject,
+        replaced_days.outlet,
+        replaced_days.day
+    from replaced_days
+    inner join deliveries on replaced_days.delivery = deliveries.delivery
+    left join outlet_days
+        on replaced_days.feed = outlet_days.feed
+        and replaced_days.outlet = outlet_days.outlet
+        and replaced_days.day = outlet_days.day
+    where deliveries.status = 'superseded' and outlet_days.day is null
+),
+
+replacement as (
+    select
+        'replacement' as gate,
+        feed,
+        subject,
+        cast(count(*) as double) as measured,
+        cast(0 as double) as allowed,
+        concat(count(*), ' outlet days of a superseded file that no file covers now, the first on ', min(day)) as note
+    from uncovered_days
+    group by feed, subject
+),
+
 measured_gates as (
     select * from refused_share
     union all
@@ -156,6 +185,8 @@ measured_gates as (
     select * from missing_outlets
     union all
     select * from overlap
+    union all
+    select * from replacement
 ),
 
 answered as (

@@ -17,7 +17,9 @@ Splice: TypeAlias = Literal["movement", "window", "half", "mean"]
 Onto: TypeAlias = Literal["published", "recalculated"]
 WeightSource: TypeAlias = Literal["file", "turnover"]
 WeightFormula: TypeAlias = Literal["lowe", "young"]
-Gate: TypeAlias = Literal["refused-share", "turnover-swing", "missing-outlets", "overlap", "index-failed"]
+Gate: TypeAlias = Literal[
+    "refused-share", "turnover-swing", "missing-outlets", "overlap", "replacement", "index-failed"
+]
 
 BILATERAL_FORMULAS: tuple[Bilateral, ...] = get_args(Bilateral)
 GEKS_METHODS: tuple[Geks, ...] = get_args(Geks)
@@ -25,7 +27,6 @@ METHODS: tuple[Method, ...] = get_args(Method)
 FORMS: tuple[Form, ...] = get_args(Form)
 SPLICES: tuple[Splice, ...] = get_args(Splice)
 ONTO: tuple[Onto, ...] = get_args(Onto)
-GATES: tuple[Gate, ...] = get_args(Gate)
 
 # The order is that of precedence: a refused line carries the first rule it breaks.
 REFUSAL_RULES: tuple[str, ...] = (

@@ -49,6 +49,12 @@ def main() -> None:
     except TillwrightError as error:
         click.echo(str(error), err=True)
         status = error.exit_status
+    except OSError as error:
+        click.echo(
+            f"{error.filename or 'A file'} cannot be used: {error.strerror or error}. Finished steps are kept.",
+            err=True,
+        )
+        status = DataError.exit_status
     except Exception as error:  # noqa: BLE001 - the last resort: a message instead of a traceback
         click.echo(_defect(error), err=True)
         status = DataError.exit_status

@@ -76,7 +76,12 @@ def run_flow(title: str, steps: Sequence[Step], home: Path) -> list[StepResult]:
         except Exception as error:
             if any(error is failure for failure in failures):
                 raise
-            raise OrchestrationError(f"Prefect broke off {title!r} in step {len(started)}: {error}") from error
+            server = os.environ.get("PREFECT_API_URL")
+            where = f"on the server of PREFECT_API_URL ({server})" if server else "within this command"
+            raise OrchestrationError(
+                f"Prefect, {where}, broke off {title!r} after {len(results)} of {len(steps)} steps: {error} "
+                "Finished steps are kept. Run again, or with --direct to do without Prefect."
+            ) from error
         finally:
             if run_ids:
                 _wait_for_records(run_ids[0], len(started))

@@ -134,13 +134,18 @@ def _check_keys(rows: pl.DataFrame, columns: list[str]) -> None:
 
 def _check_periods(periods: pl.Series) -> None:
     """Text that does not sort as time would give a wrong index without a word."""
+    if periods.dtype == pl.Categorical:
+        periods = periods.cast(pl.String)
     if periods.dtype != pl.String:
         return
     odd = periods.filter(~periods.str.contains(_SORTS_AS_TIME))
+    if not len(odd) and periods.str.len_chars().n_unique() > 1:
+        odd = periods.filter(periods.str.len_chars() != periods.str.len_chars()[0])
     if len(odd):
         raise BadPanel(
             f"Column '{periods.name}' holds '{odd[0]}', and {len(odd)} of {len(periods)} rows like it. A period is a "
-            "date, an integer, or text such as 2024-03, 2024-W07, 2024-Q1 or 2024-03-31, which sorts as time."
+            "date, an integer, or text such as 2024-03, 2024-W07, 2024-Q1 or 2024-03-31: all written alike, so that "
+            "they sort as time."
         )
 
 
@@ -161,7 +166,7 @@ def _check_once(at: NDArray[np.int64], size: int, rows: pl.DataFrame, keys: list
         first = rows.row(int(np.flatnonzero(taken[at] > 1)[0]), named=True)
         example = ", ".join(f"{key} {first[key]}" for key in keys)
         raise BadPanel(
-            f"{int((taken > 1).sum())} products occur more than once in a period (first: {example}). A panel has "
-            "one row per product and period: sum turnover and quantity to unit values first, or name the column "
+            f"{int((taken > 1).sum())} pairs of product and period occur more than once (first: {example}). A panel "
+            "has one row per product and period: sum turnover and quantity to unit values first, or name the column "
             "that tells the rows apart with by."
         )

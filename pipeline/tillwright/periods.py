@@ -85,6 +85,21 @@ def year_of(start: date, kind: PeriodKind) -> int:
     return start.isocalendar()[0] if kind == "week" else start.year
 
 
+def year_and_month(start: date, kind: PeriodKind) -> tuple[int, int]:
+    """Calendar year and month that a period ends in; a week belongs where its Thursday lies."""
+    if kind == "week":
+        thursday = start + timedelta(days=3)
+        return thursday.year, thursday.month
+    return start.year, start.month + (2 if kind == "quarter" else 0)
+
+
+def periods_of_year(year: int, kind: PeriodKind) -> list[date]:
+    """First days of every period of a calendar year; for weeks of the ISO year."""
+    first = date.fromisocalendar(year, 1, 1) if kind == "week" else date(year, 1, 1)
+    after = date.fromisocalendar(year + 1, 1, 1) if kind == "week" else date(year + 1, 1, 1)
+    return list_periods(first, after - timedelta(days=1), kind)
+
+
 def periods_a_year(kind: PeriodKind) -> int:
     """Periods between a period and the same one a year before; 52 for weeks."""
     return {"month": 12, "week": 52, "quarter": 4}[kind]

@@ -49,8 +49,11 @@ def examine_plan(path: Path) -> tuple[Plan, list[PlanProblem]]:
     try:
         plan = Plan.model_validate({**raw, "source": path.resolve()})
     except ValidationError as error:
-        problems += map(_problem, error.errors())
-        wrong = {str(detail["loc"][0]) for detail in error.errors()}
+        details = error.errors()
+        inner = {detail["loc"][0] for detail in details if len(detail["loc"]) > 1}
+        # A section whose members are wrong is also told to be too short, since they do not count.
+        problems += [_problem(d) for d in details if not (d["type"] == "too_short" and d["loc"][0] in inner)]
+        wrong = {str(detail["loc"][0]) for detail in details}
         plan = Plan.model_construct(source=path.resolve(), **{name: _salvage(raw, name, wrong) for name in SECTIONS})
     for check, needs in _CHECKS.items():
         if plan.has(*needs):
@@ -116,6 +119,8 @@ def _feed_problems(plan: Plan) -> Iterator[PlanProblem]:
             yield from _pattern_problems(f"{key}.replaces", feed.replaces, "what")
         if feed.limits.unit_price and feed.limits.unit_price[0] > feed.limits.unit_price[1]:
             yield PlanProblem(f"{key}.limits.unit_price", str(list(feed.limits.unit_price)), "lower bound first")
+        if feed.decimal == feed.delimiter:
+            yield PlanProblem(f"{key}.delimiter", repr(feed.delimiter), "another character than feed.decimal")
         files = plan.delivery_files(feed)
         if files and feed.announced and not _matches_any(feed.announced, files):
             allowed = f"a pattern that the name of at least one file has, such as {files[0].name}"
@@ -133,7 +138,7 @@ def _matches_any(pattern: str, files: list[Path]) -> bool:
 
 def _zone_problems(key: str, zone: str | None) -> Iterator[PlanProblem]:
     try:
-        ZoneInfo(zone or "UTC")
+        ZoneInfo("UTC" if zone is None else zone)
     except (KeyError, ValueError, OSError):
         yield PlanProblem(key, repr(zone), "a time zone of the IANA database, such as 'Europe/Lisbon'")
 
@@ -148,6 +153,16 @@ def _pattern_problems(key: str, pattern: str | None, group: str) -> Iterator[Pla
         return
     if group not in groups:
         yield PlanProblem(key, repr(pattern), f"a regular expression with a named group (?P<{group}>…)")
+
+
+def _calendar_problems(plan: Plan) -> Iterator[PlanProblem]:
+    scope, link = plan.plan, plan.weights.link_month
+    for position, feed in enumerate(plan.feed):
+        if feed.columns.month is not None and (scope.period == "week" or scope.month_rule != "calendar"):
+            allowed = "sold_at or week: months cannot be told apart by weeks"
+            yield PlanProblem(f"feed.{position}.columns.month", repr(feed.columns.month), allowed)
+    if scope.period == "quarter" and link % 3:
+        yield PlanProblem("weights.link_month", str(link), "3, 6, 9 or 12, the last month of a quarter")
 
 
 def _stratum_problems(plan: Plan) -> Iterator[PlanProblem]:
@@ -218,6 +233,7 @@ def _screening_problems(plan: Plan) -> Iterator[PlanProblem]:
 _CHECKS: dict[Callable[[Plan], Iterator[PlanProblem]], tuple[str, ...]] = {
     _scope_problems: ("plan",),
     _feed_problems: ("feed",),
+    _calendar_problems: ("plan", "feed", "weights"),
     _stratum_problems: ("feed", "classification"),
     _classification_problems: ("classification",),
     _weight_problems: ("weights",),

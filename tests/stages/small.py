@@ -37,7 +37,7 @@ def feed(**changes: Any) -> Table:
 def sections(*feeds: Table, **changes: Any) -> Table:
     """All sections of a plan that is valid once `write_plan` has laid its files beside it."""
     return {
-        "plan": {"title": "Small", "currency": "crown", "start": "2024-01", "reference": "2024"},
+        "plan": {"title": "Small", "currency": "crown", "start": "2024-01", "reference": "2024-01"},
         "feed": list(feeds or [feed()]),
         "classification": {"headings": "headings.csv", "assignment": "assignment.csv"},
         "weights": {"file": "weights.csv"},

@@ -61,6 +61,7 @@ class Summary:
     feeds: tuple[FeedSummary, ...]
     gates_checked: int
     breached: tuple[GateSummary, ...]
+    idle_answers: tuple[str, ...]
     methods: dict[str, int]
     excluded: dict[str, int]
     all_items: tuple[PeriodSummary, ...]
@@ -89,6 +90,7 @@ def summarise_intake(context: Context, steps: Sequence[StepResult]) -> Summary:
         feeds=tuple(_feed(context, feed.name, deliveries, None) for feed in context.plan.feed),
         gates_checked=gates.height,
         breached=_breached(gates),
+        idle_answers=(),
         methods={},
         excluded={},
         all_items=(),
@@ -114,6 +116,7 @@ def summarise_compile(context: Context, steps: Sequence[StepResult]) -> Summary:
         feeds=tuple(_feed(context, feed.name, deliveries, unassigned) for feed in context.plan.feed),
         gates_checked=gates.height + len(context.references.tree.leaves),
         breached=(*_breached(gates), *_failed(failures)),
+        idle_answers=_idle_answers(context, gates, failures),
         methods=dict(methods.iter_rows()),
         excluded=dict(excluded.iter_rows()),
         all_items=_all_items(context),
@@ -170,9 +173,17 @@ def _breached(gates: pl.DataFrame) -> tuple[GateSummary, ...]:
 
 def _failed(failures: pl.DataFrame) -> tuple[GateSummary, ...]:
     return tuple(
-        GateSummary("index-failed", stratum, ea, message, by, answer)
+        GateSummary("index-failed", "", f"{ea} / {stratum}" if stratum else ea, message, by, answer)
         for ea, stratum, message, by, answer in failures.iter_rows()
     )
+
+
+def _idle_answers(context: Context, gates: pl.DataFrame, failures: pl.DataFrame) -> tuple[str, ...]:
+    """Answers of the plan that meet no breached gate."""
+    met = set(gates.filter("breached").select("gate", "feed", "subject").iter_rows())
+    met |= {("index-failed", None, ea) for ea in failures["ea"]}
+    idle = [a for a in context.plan.answer if (a.gate, None if a.gate == "index-failed" else a.feed, a.on) not in met]
+    return tuple(f"{answer.gate} on {answer.on}" + (f" ({answer.feed})" if answer.feed else "") for answer in idle)
 
 
 def _all_items(context: Context) -> tuple[PeriodSummary, ...]:

@@ -41,6 +41,8 @@ def _sections(summary: Summary) -> Iterator[RenderableType]:
     if any(feed.unassigned_items for feed in summary.feeds):
         yield from _section("Accepted, but without an elementary aggregate", _unassigned(summary))
     yield from _section(_gate_title(summary), _gates(summary))
+    if summary.idle_answers:
+        yield from _section("Answers that meet no breached gate", Text("\n".join(summary.idle_answers)))
     if summary.methods:
         yield from _section("Elementary aggregates", _methods(summary))
     if summary.all_items:

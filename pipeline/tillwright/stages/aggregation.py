@@ -3,20 +3,20 @@
 from __future__ import annotations
 
 import re
-from dataclasses import dataclass
-from datetime import date, timedelta
+from datetime import date
 
 import numpy as np
 import polars as pl
 from numpy.typing import NDArray
 
-from tillwright.errors import BrokenInvariant, PlanError, PlanProblem
-from tillwright.kernels.chaining import Aggregate, WeightYear, aggregate, update_weights
+from tillwright.errors import BrokenInvariant, CallError
+from tillwright.kernels.chaining import Aggregate, aggregate
 from tillwright.kernels.contributions import measure_contributions, percent_change
 from tillwright.panels import Array
-from tillwright.periods import parse_period, periods_a_year
+from tillwright.periods import label_period, parse_period, periods_a_year, periods_of_year, year_and_month
 from tillwright.plan import Plan
 from tillwright.stages.context import Context
+from tillwright.stages.weighting import Components, weight_years
 from tillwright.store.references import Tree
 from tillwright.store.workspace import write_frame
 
@@ -25,21 +25,12 @@ _ADDITIVE_TO = 1e-9
 _DECIMAL = pl.Decimal(38, 10)
 
 
-@dataclass(frozen=True, slots=True)
-class Components:
-    """What is aggregated: (T, L) levels, and per component its leaf of the tree and its stratum."""
-
-    levels: Array
-    leaves: tuple[str, ...]
-    strata: tuple[str, ...]
-
-
 def aggregate_headings(context: Context) -> int:
     """Write `headings`; the number of headings that have an index.
 
     Raises
     ------
-    PlanError : no weights for a year, or a reference outside the periods compiled.
+    CallError : no weights for a year, or a reference that the periods compiled do not hold.
     BrokenInvariant : contributions do not add up to the change of all items.
     """
     periods = context.periods()["period"]
@@ -47,7 +38,7 @@ def aggregate_headings(context: Context) -> int:
     components = _components(context, periods)
     order = sorted(tree.parents, key=lambda heading: (bool(tree.parents[heading]), heading))
     paths = _paths(components.leaves, tree, order)
-    years = _weight_years(context, components, periods)
+    years = weight_years(context, components, periods)
     result = aggregate(components.levels, years, paths, len(order))
     frame = _frame(context, result, order, periods)
     context.workspace.write("headings", frame)
@@ -82,81 +73,22 @@ def _paths(leaves: tuple[str, ...], tree: Tree, order: list[str]) -> NDArray[np.
     return np.array([line + [0] * (depth - len(line)) for line in lines], dtype=np.intp)
 
 
-def _weight_years(context: Context, components: Components, periods: pl.Series) -> list[WeightYear]:
-    """The stretches of periods that are weighted alike, each with its weights at link prices."""
-    plan = context.plan
-    months = [_year_month(day, plan) for day in periods]
-    link_month = plan.weights.link_month
-    belongs = [year if link_month == 12 or month > link_month else year - 1 for year, month in months]
-    turnover = _turnover(context)
-    years = []
-    for year in sorted(set(belongs)):
-        rows = [position for position, owner in enumerate(belongs) if owner == year]
-        link = max(rows[0] - 1, 0)
-        base = np.array([n for n, (calendar, _) in enumerate(months) if calendar == year - 1], dtype=np.intp)
-        weights = _weights(context, components, year, turnover)
-        update = plan.weights.formula == "lowe" and plan.weights.price_update and rows[0] > 0 and base.size > 0
-        if update:
-            weights = update_weights(weights, components.levels, link, base)
-        years.append(WeightYear(link, rows[0], rows[-1], weights))
-    return years
-
-
-def _year_month(day: date, plan: Plan) -> tuple[int, int]:
-    """Calendar year and month that a period ends in; a week belongs where its Thursday lies."""
-    if plan.plan.period == "week":
-        thursday = day + timedelta(days=3)
-        return thursday.year, thursday.month
-    return day.year, day.month + (2 if plan.plan.period == "quarter" else 0)
-
-
-def _turnover(context: Context) -> pl.DataFrame:
-    """Accepted turnover by calendar year, elementary aggregate and stratum."""
-    year = pl.col("period").dt.iso_year() if context.plan.plan.period == "week" else pl.col("period").dt.year()
-    panel = context.workspace.read("panel")
-    return panel.group_by(year.cast(pl.Int64).alias("year"), "ea", "stratum").agg(
-        pl.col("turnover").sum().cast(pl.Float64)
-    )
-
-
-def _weights(context: Context, components: Components, year: int, turnover: pl.DataFrame) -> Array:
-    """(L,) weights of a year: of the leaf, divided among its strata by turnover of the year before."""
-    known = sorted(set(turnover["year"]))
-    source = year - 1 if year - 1 in known else min(known, key=lambda candidate: abs(candidate - year))
-    rows = turnover.filter(pl.col("year") == source)
-    sold = {(ea, stratum): value for ea, stratum, value in rows.select("ea", "stratum", "turnover").iter_rows()}
-    own = np.array([sold.get(key, 0.0) for key in zip(components.leaves, components.strata, strict=True)])
-    if context.plan.weights.source == "turnover":
-        return own
-    listed = context.references.weights.filter(pl.col("year") == year)
-    if listed.height == 0:
-        problem = PlanProblem("weights.file", f"no weights for {year}", "weights for every year compiled")
-        raise PlanError(str(context.plan.source), [problem])
-    given = dict(listed.select("heading", "weight").iter_rows())
-    leaves = np.array(components.leaves)
-    total = np.array([own[leaves == leaf].sum() for leaf in components.leaves])
-    count = np.array([(leaves == leaf).sum() for leaf in components.leaves])
-    part = np.divide(own, total, out=1.0 / count, where=total > 0)
-    weights: Array = np.array([given[leaf] for leaf in components.leaves]) * part
-    return weights
-
-
 def _frame(context: Context, result: Aggregate, order: list[str], periods: pl.Series) -> pl.DataFrame:
     tree, year = context.references.tree, periods_a_year(context.plan.plan.period)
     index = result.index * _scale(context.plan, result.index, periods)
     contributions = {lag: measure_contributions(result.points, result.index[:, 0], lag) for lag in (1, year)}
-    for lag, parts in contributions.items():
-        _check_additive(parts, percent_change(result.index[:, 0], lag), [order.index(leaf) for leaf in tree.leaves])
-    missing = ~np.isfinite(index)
+    leaves = [order.index(leaf) for leaf in tree.leaves]
     columns = {
         "index": index,
         "weight": result.weight,
         "imputed_weight": result.imputed,
         "change_period": percent_change(index, 1),
         "change_year": percent_change(index, year),
-        "contribution_period": np.where(missing, np.nan, contributions[1]),
-        "contribution_year": np.where(missing, np.nan, contributions[year]),
+        "contribution_period": contributions[1],
+        "contribution_year": contributions[year],
     }
+    for lag in ("period", "year"):
+        _check_additive(columns[f"contribution_{lag}"][:, leaves], columns[f"change_{lag}"][:, 0])
     frame = pl.DataFrame(
         {
             "heading": np.repeat(order, len(periods)),
@@ -190,25 +122,33 @@ def _for_people(context: Context, frame: pl.DataFrame) -> pl.DataFrame:
 
 
 def _scale(plan: Plan, index: Array, periods: pl.Series) -> Array:
-    """(H,) factors that make each heading 100 in the reference, or in its first period without one."""
-    reference, days = plan.plan.reference, periods.to_list()
-    if re.fullmatch(r"\d{4}", reference):
-        rows = [n for n, day in enumerate(days) if _year_month(day, plan)[0] == int(reference)]
-    else:
-        wanted = parse_period(reference, plan.plan.period) if reference else days[0]
-        rows = [n for n, day in enumerate(days) if day == wanted]
-    if not rows:
-        problem = PlanProblem("plan.reference", repr(reference), "a year or period among those compiled")
-        raise PlanError(str(plan.source), [problem])
-    level = index[rows].mean(axis=0)
-    known = np.isfinite(index)
-    first = index[known.argmax(axis=0), np.arange(index.shape[1])]
-    scale: Array = 100.0 / np.where(np.isfinite(level), level, first)
+    """(H,) factors that make each heading 100 in the reference period, or on average over the reference year."""
+    rows = _reference_rows(plan, periods.to_list())
+    scale: Array = 100.0 / index[rows].mean(axis=0)
     return scale
 
 
-def _check_additive(parts: Array, change: Array, leaves: list[int]) -> None:
-    known = np.isfinite(change)
-    gap = np.abs(np.nan_to_num(parts[:, leaves]).sum(axis=1) - change)[known]
+def _reference_rows(plan: Plan, days: list[date]) -> list[int]:
+    reference, kind = plan.plan.reference, plan.plan.period
+    if not re.fullmatch(r"\d{4}", reference):
+        wanted = parse_period(reference, kind) if reference else days[0]
+        rows = [n for n, day in enumerate(days) if day == wanted]
+    else:
+        rows = [n for n, day in enumerate(days) if year_and_month(day, kind)[0] == int(reference)]
+        if len(rows) != len(periods_of_year(int(reference), kind)):
+            rows = []
+    if not rows:
+        span = f"{label_period(days[0], kind)} to {label_period(days[-1], kind)}"
+        raise CallError(
+            f"plan.reference is '{reference}', which the periods compiled ({span}) do not hold whole, so no "
+            "level can be 100 on its average for good. Compile further, or give a period as the reference until the "
+            "year is over."
+        )
+    return rows
+
+
+def _check_additive(parts: Array, change: Array) -> None:
+    """Contributions of the leaves must add up to the change of all items, as both are written."""
+    gap = np.abs(np.nan_to_num(parts).sum(axis=1) - change)[np.isfinite(change)]
     if gap.size and gap.max() > _ADDITIVE_TO:
         raise BrokenInvariant("contributions add up", f"they miss the change of all items by {gap.max():.2e} points")

@@ -2,8 +2,9 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
-from datetime import date
+from datetime import UTC, date, datetime
 
 import polars as pl
 
@@ -38,8 +39,12 @@ class Context:
         """Make tables kept by delivery readable, restricted to active deliveries."""
         active = self.active_deliveries()
         for table in tables:
-            parts = [path for path in self.workspace.parts(table, active) if path.exists()]
-            offer(connection, table, parts or pl.DataFrame(schema=TABLES[table].columns))
+            self.offer_parts(connection, table, active, called=table)
+
+    def offer_parts(self, connection: Connection, table: str, deliveries: Sequence[str], *, called: str) -> None:
+        """Make the parts of some deliveries readable under a name; those that there are none of are left out."""
+        parts = [path for path in self.workspace.parts(table, deliveries) if path.exists()]
+        offer(connection, called, parts or pl.DataFrame(schema=TABLES[table].columns))
 
     def label(self, period: date) -> str:
         """A period as people write it."""
@@ -48,7 +53,8 @@ class Context:
     def periods(self) -> pl.DataFrame:
         """period, label, previous_period, next_period from the plan's start to the last one compiled.
 
-        The last one is `through`, or else the last with accepted sales of an active delivery.
+        The last one is `through`, or else the last with accepted sales of an active delivery that does not lie in
+        the future: a stray date must not stretch the calendar.
         """
         kind = self.plan.plan.period
         last = self.through or self._last_sold()
@@ -67,6 +73,11 @@ class Context:
         parts = self.workspace.parts("sales", self.active_deliveries())
         if not parts:
             return None
-        last = pl.scan_parquet(parts, glob=False).filter(pl.col("counted")).select(pl.col("period").max()).collect()
+        last = (
+            pl.scan_parquet(parts, glob=False)
+            .filter(pl.col("counted") & (pl.col("period") <= datetime.now(UTC).date()))
+            .select(pl.col("period").max())
+            .collect()
+        )
         found: date | None = last.item()
         return found

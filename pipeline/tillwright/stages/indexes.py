@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Collection
+
 import numpy as np
 import polars as pl
 
@@ -38,28 +40,54 @@ def compile_indexes(context: Context) -> int:
             failed.append((ea, stratum, message))
         if index is not None:
             made.append(_series(block, index, recipe, periods))
+    failed += _empty_leaves(context, periods, {ea for ea, _ in arrays.keys.iter_rows()})
     context.workspace.write("ea_indexes", pl.concat(made) if made else pl.DataFrame(schema=_EMPTY))
     context.workspace.write("failures", _failures(failed, context))
     return len(made)
 
 
 def _try_index(block: Block, recipe: Recipe, context: Context, periods: pl.Series) -> tuple[Array | None, str]:
-    """The index, if one can be made, and what is wrong with it, if anything is."""
+    """The index, if one can be made, and what is wrong with it, if anything is.
+
+    A window that falls apart ends the index before it; what was made of earlier windows stands.
+    """
     prices, quantities = block.prices, block.values
     assert quantities is not None
     priced = np.flatnonzero(np.isfinite(prices).any(axis=1))
-    span = slice(int(priced[0]), int(priced[-1]) + 1)
-    labels = [context.label(day) for day in periods[span.start : span.stop]]
-    try:
-        index = np.full(len(prices), np.nan)
-        index[span] = make_index(prices[span], quantities[span], recipe)
-    except UnconnectedPeriods as error:
-        return None, str(error.labelled(labels, f"{block.key[0]} {block.key[1]}".strip()))
-    gaps = np.flatnonzero(~np.isfinite(index[priced[0] :])) + priced[0]
-    if gaps.size == 0:
-        return index, ""
-    first, last = context.label(periods[int(gaps[0])]), context.label(periods[int(gaps[-1])])
-    return index, f"no level in {gaps.size} of {len(prices)} periods ({first} to {last}): no product, or none in common"
+    start, end = int(priced[0]), int(priced[-1]) + 1
+    index, message = np.full(len(prices), np.nan), ""
+    for stop in range(end, start, -1):
+        try:
+            index[start:stop] = make_index(prices[start:stop], quantities[start:stop], recipe)
+            break
+        except UnconnectedPeriods as error:
+            labels = [context.label(day) for day in periods[start:stop]]
+            message = str(error.labelled(labels, f"{block.key[0]} {block.key[1]}".strip()))
+    gaps = np.flatnonzero(~np.isfinite(index))
+    if gaps.size and not message:
+        first, last = context.label(periods[int(gaps[0])]), context.label(periods[int(gaps[-1])])
+        message = (
+            f"no level in {gaps.size} of {len(prices)} periods, between {first} and {last}: no product, none "
+            "in common, or no window that reaches across the gap; imputed from the heading above"
+        )
+    return (index if np.isfinite(index).any() else None), message
+
+
+def _empty_leaves(context: Context, periods: pl.Series, compiled: Collection[str]) -> list[tuple[str, str, str]]:
+    """Leaves that weigh something and have no product at all, and outside series with periods missing."""
+    weights, outside = context.references.weights, context.references.outside
+    weighing = set(weights.filter(pl.col("weight") > 0)["heading"])
+    surveyed = outside.filter(pl.col("period").is_in(periods.implode())).group_by("heading").len()
+    figures = dict(surveyed.iter_rows())
+    failed = []
+    for leaf in context.references.tree.leaves:
+        if leaf in set(outside["heading"]):
+            missing = len(periods) - figures.get(leaf, 0)
+            if missing:
+                failed.append((leaf, "", f"the outside series has no figure in {missing} of {len(periods)} periods"))
+        elif leaf in weighing and leaf not in compiled:
+            failed.append((leaf, "", "no product of it was sold in any period; imputed from the heading above"))
+    return failed
 
 
 def _series(block: Block, index: Array, recipe: Recipe, periods: pl.Series) -> pl.DataFrame:

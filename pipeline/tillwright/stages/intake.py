@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import os
 import re
-from collections.abc import Collection, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from datetime import date, timedelta
 from decimal import Decimal
@@ -44,8 +44,12 @@ class Delivery:
 
     @property
     def name(self) -> str:
-        """The delivery's name: its feed and the start of its hash."""
-        return f"{self.feed.name}-{self.sha256[:12]}"
+        """The delivery's name: its feed, the start of its hash, and the period that its file announces.
+
+        The same bytes under names that announce different periods are different deliveries.
+        """
+        announced = announced_text(self.feed, self.path.name)
+        return f"{self.feed.name}-{self.sha256[:12]}" + (f"-{announced}" if announced else "")
 
 
 def receive(plan: Plan, ledger: Ledger) -> list[Delivery]:
@@ -127,6 +131,12 @@ def part_files(workspace: Workspace, delivery: Delivery) -> list[Path]:
     ]
 
 
+def announced_text(feed: Feed, file_name: str) -> str:
+    """The period that a file's name announces, as it is written there; empty if it announces none."""
+    found = re.search(feed.announced, file_name) if feed.announced else None
+    return (found["period"] or "") if found else ""
+
+
 def announced_period(feed: Feed, file_name: str) -> tuple[date, date] | None:
     """First day and day after the last of the period that a file's name announces; None if it announces none.
 
@@ -134,15 +144,11 @@ def announced_period(feed: Feed, file_name: str) -> tuple[date, date] | None:
     ------
     UnreadableDeliveries : the period it announces is none, such as 2024-13.
     """
-    if feed.announced is None:
-        return None
-    found = re.search(feed.announced, file_name)
-    if found is None or found["period"] is None:
-        return None
+    text = announced_text(feed, file_name)
     try:
-        return parse_any_period(found["period"])
+        return parse_any_period(text) if text else None
     except ValueError:
-        reason = f"its name announces the period '{found['period']}', which there is not"
+        reason = f"its name announces the period '{text}', which there is not"
         raise UnreadableDeliveries([UnreadableFile(feed.name, file_name, reason)]) from None
 
 
@@ -241,16 +247,23 @@ def settle(context: Context, deliveries: Sequence[Delivery]) -> int:
 
 def _statuses(feed: Feed, deliveries: Sequence[Delivery]) -> list[tuple[str, str | None]]:
     """Status of each delivery of a feed, and the file that replaces it."""
-    originals: dict[str, Delivery] = {}
     latest: dict[str, Delivery] = {}
     present = [delivery for delivery in deliveries if delivery.present]
     for delivery in present:
-        if originals.setdefault(delivery.sha256, delivery) is delivery:
-            what, rank = _replaces(feed, delivery)
-            if what not in latest or rank > _replaces(feed, latest[what])[1]:
-                latest[what] = delivery
-    files = {delivery.file for delivery in present}
-    return [_status(feed, delivery, originals, latest, files) for delivery in deliveries]
+        what, rank = _replaces(feed, delivery)
+        if what not in latest or rank > _replaces(feed, latest[what])[1]:
+            latest[what] = delivery
+    first: dict[str, Delivery] = {}
+    originals: dict[str, Delivery] = {}
+    for delivery in sorted(present, key=lambda delivery: (len(Path(delivery.file).parts), delivery.file)):
+        what, _ = _replaces(feed, delivery)
+        owner, _ = _replaces(feed, first.setdefault(delivery.name, delivery))
+        if what == owner and delivery.name == latest[what].name:
+            originals.setdefault(delivery.name, delivery)
+        elif what != owner:
+            originals.setdefault(delivery.name, first[delivery.name])
+    here = {delivery.file: delivery for delivery in present}
+    return [_status(feed, delivery, originals, latest, here) for delivery in deliveries]
 
 
 def _status(
@@ -258,41 +271,57 @@ def _status(
     delivery: Delivery,
     originals: Mapping[str, Delivery],
     latest: Mapping[str, Delivery],
-    files: Collection[str],
+    here: Mapping[str, Delivery],
 ) -> tuple[str, str | None]:
-    """active; repeated: the same bytes as another file; superseded; withdrawn: gone and not replaced.
+    """active; repeated: the same as another file; superseded; withdrawn: gone and not replaced.
 
     A file that was overwritten counts as superseded by what holds its name now.
     """
+    original = originals.get(delivery.name)
     winner = latest.get(_replaces(feed, delivery)[0])
-    if delivery.present and originals[delivery.sha256] is not delivery:
-        return "repeated", originals[delivery.sha256].file
-    if not delivery.present and delivery.file not in files:
-        moved = originals.get(delivery.sha256)
-        return "withdrawn", moved.file if moved else None
-    if winner is delivery:
+    if original is delivery and winner is not None and winner.name == delivery.name:
         return "active", None
+    if not delivery.present and delivery.file not in here:
+        return "withdrawn", original.file if original else None
+    if delivery.present and original is not None and original is not delivery:
+        return "repeated", original.file
     return "superseded", winner.file if winner else None
 
 
 def _replaces(feed: Feed, delivery: Delivery) -> tuple[str, tuple[object, ...]]:
-    """What a delivery stands for, and its rank among deliveries that stand for the same."""
-    name = Path(delivery.file).name
-    if feed.replaces == "same-name":
-        return name, (delivery.arrival,)
-    found = re.search(feed.replaces, name)
+    """What a delivery stands for, and its rank among deliveries that stand for the same.
+
+    Ranks come from the files, not from when they were seen, so that a workspace made anew agrees: by
+    version, else the file in the deeper folder, else the later path.
+    """
+    path = Path(delivery.file)
+    place = (len(path.parts), delivery.file)
+    found = None if feed.replaces == "same-name" else re.search(feed.replaces, path.name)
     if found is None:
-        return name, ("", delivery.arrival)
+        return path.name, ("", *place)
     version = found.groupdict().get("version") or ""
     digits = re.sub(r"\d+", lambda number: number[0].rjust(12, "0"), version)
-    return found["what"], (digits, delivery.arrival)
+    return found["what"], (digits, *place)
+
+
+def find_active(plan: Plan, deliveries: Sequence[Delivery]) -> set[int]:
+    """Identities of the deliveries whose lines count."""
+    active = set()
+    for feed in plan.feed:
+        own = [delivery for delivery in deliveries if delivery.feed.name == feed.name]
+        statuses = _statuses(feed, own)
+        active |= {id(delivery) for delivery, (status, _) in zip(own, statuses, strict=True) if status == "active"}
+    return active
 
 
 def check_gates(context: Context) -> int:
     """Write `gates`; the number of gates checked."""
     connection = context.connect()
-    offer(connection, "deliveries", context.workspace.read("deliveries"))
+    deliveries = context.workspace.read("deliveries")
+    offer(connection, "deliveries", deliveries)
     context.offer_active(connection, "sales", "outlet_days")
+    replaced = deliveries.filter(pl.col("status") == "superseded")["delivery"].to_list()
+    context.offer_parts(connection, "outlet_days", replaced, called="replaced_days")
     offer(connection, "periods", context.periods())
     offer(connection, "gate_limits", _gate_limits(context.plan))
     offer(connection, "answers", answers(context.plan))

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import time
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Collection, Iterator, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -16,7 +16,7 @@ from tillwright.stages.aggregation import aggregate_headings
 from tillwright.stages.context import Context
 from tillwright.stages.identity import identify
 from tillwright.stages.indexes import compile_indexes
-from tillwright.stages.intake import Delivery, announced_period, check_gates, part_files, settle, take_in
+from tillwright.stages.intake import Delivery, announced_period, check_gates, find_active, part_files, settle, take_in
 from tillwright.stages.keyed import Run, StepResult, Work, perform
 from tillwright.stages.panel import make_panel
 from tillwright.stages.screening import screen
@@ -42,9 +42,14 @@ class Step:
 def intake_steps(run: Run, deliveries: Sequence[Delivery]) -> list[Step]:
     """Steps of stage 1: batches of deliveries, then what became of each file, and the gates."""
     context, workspace = run.context, run.context.workspace
-    once = {delivery.name: delivery for delivery in reversed(deliveries) if delivery.present}
-    batches = enumerate(_batches(list(reversed(once.values()))), start=1)
-    taking = [_batch_step(run, f"intake {batch[0].feed.name} {number}", batch) for number, batch in batches]
+    active = find_active(context.plan, deliveries)
+    needed = sorted(
+        (delivery for delivery in deliveries if delivery.present), key=lambda delivery: id(delivery) not in active
+    )
+    once = {delivery.name: delivery for delivery in reversed(needed)}
+    ordered = [delivery for delivery in deliveries if once.get(delivery.name) is delivery]
+    batches = enumerate(_batches(ordered), start=1)
+    taking = [_batch_step(run, f"intake {batch[0].feed.name} {number}", batch, active) for number, batch in batches]
     listing = [f"{d.feed.name} {d.file} {d.sha256} {d.arrival} {d.present}" for d in deliveries]
     rules = [f"{feed.name} {feed.replaces}" for feed in context.plan.feed]
     names = sorted({delivery.name for delivery in deliveries})
@@ -100,8 +105,8 @@ def _table_step(
     return Step(name, lambda: perform(run, Work(name, inputs(), outputs, lambda: do(run.context))))
 
 
-def _batch_step(run: Run, name: str, batch: Sequence[Delivery]) -> Step:
-    return Step(name, lambda: _take_in_batch(run, name, batch), reads_files=True)
+def _batch_step(run: Run, name: str, batch: Sequence[Delivery], active: Collection[int]) -> Step:
+    return Step(name, lambda: _take_in_batch(run, name, batch, active), reads_files=True)
 
 
 def _batches(deliveries: Sequence[Delivery]) -> Iterator[list[Delivery]]:
@@ -116,8 +121,12 @@ def _batches(deliveries: Sequence[Delivery]) -> Iterator[list[Delivery]]:
         yield batch
 
 
-def _take_in_batch(run: Run, name: str, batch: Sequence[Delivery]) -> StepResult:
-    """Take in each delivery of a batch that is not taken in yet; unreadable ones are noted and told at the end."""
+def _take_in_batch(run: Run, name: str, batch: Sequence[Delivery], active: Collection[int]) -> StepResult:
+    """Take in each delivery of a batch that is not taken in yet.
+
+    Active ones that cannot be read are noted and told at the end; a superseded one may be what was replaced for
+    that very reason.
+    """
     started = time.monotonic()
     connection = run.context.connect()
     results: list[StepResult] = []
@@ -131,7 +140,8 @@ def _take_in_batch(run: Run, name: str, batch: Sequence[Delivery]) -> StepResult
             work = Work(f"intake {delivery.name}", _delivery_inputs(run.context, delivery), outputs, take)
             results.append(perform(run, work))
         except UnreadableDeliveries as error:
-            run.unreadable.extend(error.files)
+            if id(delivery) in active:
+                run.unreadable.extend(error.files)
     rows = sum(result.rows for result in results)
     return StepResult(name, rows, time.monotonic() - started, all(result.unchanged for result in results))
 
@@ -152,7 +162,8 @@ def _gate_inputs(context: Context) -> list[str]:
     limits = [f"{feed.name} {feed.gates.model_dump_json()}" for feed in context.plan.feed]
     return [
         *_table_hashes(context, "deliveries"),
-        *_sold(context, "outlet_days"),
+        *_sold(context),
+        *_hashes(context.workspace.parts("outlet_days", context.workspace.read("deliveries")["delivery"].to_list())),
         *_span(context),
         *limits,
         *_answers(context),
@@ -179,6 +190,8 @@ def _index_inputs(context: Context) -> list[str]:
     return [
         *_table_hashes(context, "screened"),
         *_span(context),
+        context.references.weights.write_csv(),
+        context.references.outside.write_csv(),
         context.plan.index.model_dump_json(),
         tree,
         *_answers(context),
@@ -189,7 +202,7 @@ def _aggregation_inputs(context: Context) -> list[str]:
     plan, references = context.plan, context.references
     small = [references.weights.write_csv(), references.outside.write_csv(), str(references.tree)]
     return [
-        *_table_hashes(context, "ea_indexes", "panel"),
+        *_table_hashes(context, "ea_indexes", "screened"),
         *_span(context),
         plan.weights.model_dump_json(),
         plan.plan.model_dump_json(),

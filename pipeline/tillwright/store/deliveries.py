@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import csv
+import gzip
 import hashlib
 from collections.abc import Iterator, Sequence
 from contextlib import contextmanager
@@ -55,7 +56,7 @@ def open_delivery(connection: Connection, path: Path, feed: Feed, stratum: Seque
 
 @contextmanager
 def reading(path: Path, feed: Feed) -> Iterator[None]:
-    """Turn what goes wrong while a delivery is read into an error about that delivery."""
+    """Turn what is wrong with a delivery into an error about it; what is wrong with the disk stays an OSError."""
     try:
         yield
     except duckdb.OutOfMemoryException as error:
@@ -63,7 +64,7 @@ def reading(path: Path, feed: Feed) -> Iterator[None]:
             f"{path.name} (feed {feed.name}) needs more memory than it may use: {_first_sentence(str(error))} "
             "Give more with --memory, such as --memory 8GB."
         ) from None
-    except (Unfit, duckdb.Error, OSError, EOFError, UnicodeError, csv.Error) as error:
+    except (Unfit, duckdb.Error, gzip.BadGzipFile, EOFError, UnicodeError, csv.Error) as error:
         raise UnreadableDeliveries([UnreadableFile(feed.name, path.name, _reason(path, feed, error))]) from None
 
 

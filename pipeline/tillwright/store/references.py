@@ -91,6 +91,7 @@ def _read_references(plan: Plan, problems: list[PlanProblem], told: set[str]) ->
     if tree is None or assignment is None:
         return None
     problems += _override_problems(tree, plan)
+    problems += _mixed_problems(assignment, outside, plan)
     for optional in ("feed", "category", "item"):
         if optional not in assignment.columns:
             assignment = assignment.with_columns(_NO_TEXT.alias(optional))
@@ -135,7 +136,7 @@ def _read_master(plan: Plan, number: int, problems: list[PlanProblem], told: set
     text = [(pl.col(mapped[role]).cast(pl.String) if role in mapped else _NO_TEXT).alias(role) for role in roles]
     attributes = pl.struct(master.attributes).struct.json_encode() if master.attributes else _NO_TEXT
     frame = raw.select(pl.lit(master.feed).alias("feed"), *text, attributes.alias("attributes"))
-    frame = frame.filter(pl.col("item").is_not_null())
+    frame = frame.select(pl.col(pl.String).str.strip_chars().replace("", None)).filter(pl.col("item").is_not_null())
     repeated = frame.height - frame["item"].n_unique()
     if repeated:
         problems.append(PlanProblem(key, f"{repeated} rows that repeat an item", "one row per item"))
@@ -222,6 +223,16 @@ def _override_problems(tree: Tree, plan: Plan) -> Iterator[PlanProblem]:
         if override.heading not in tree.parents:
             allowed = f"a heading of {plan.classification.headings}"
             yield PlanProblem(f"index.override.{number}.heading", repr(override.heading), allowed)
+
+
+def _mixed_problems(assignment: pl.DataFrame, outside: pl.DataFrame, plan: Plan) -> Iterator[PlanProblem]:
+    """A leaf is compiled from sales or collected elsewhere, and what is collected elsewhere has no turnover."""
+    both = sorted(set(outside["heading"]) & set(assignment["ea"].drop_nulls()))
+    if both:
+        allowed = "headings that classification.assignment does not assign items to"
+        yield PlanProblem("outside_series.file", f"heading {', '.join(both[:5])}", allowed)
+    if outside.height and plan.has("weights") and plan.weights.source == "turnover":
+        yield PlanProblem("weights.source", "'turnover'", "'file' beside outside series, which have no turnover")
 
 
 def _is_circular(parents: dict[str, str], heading: str) -> bool:

@@ -11,7 +11,7 @@ from typing import IO, cast
 from tillwright.plan import Feed
 from tillwright.queries import Connection, identifier, literal
 
-TEXT_SUFFIXES = (".csv", ".csv.gz")
+TEXT_SUFFIXES = (".csv", ".csv.gz", ".tsv", ".tsv.gz", ".txt", ".txt.gz")
 # Names of the reader's own columns: a control character keeps them apart from any header.
 _TEXT, _LINE, _BROKEN, _CELLS = ('"\x1ftext"', '"\x1fline"', '"\x1fbroken"', '"\x1fcells"')
 
@@ -90,8 +90,8 @@ def _open_text(path: Path, feed: Feed) -> Source:
     named = ", ".join(f"{_unquoted(f'{_CELLS}[{n + 1}]')} as {identifier(name)}" for n, name in enumerate(names))
     lines = (
         f"read_csv({literal(str(path))}, columns = {{'text': 'VARCHAR'}}, header = false, skip = 1, "
-        f"delim = '\\x01', quote = '', escape = '', encoding = {literal(feed.encoding)}, auto_detect = false, "
-        "max_line_size = 16777216)"
+        "delim = '\\x01', quote = '', escape = '', strict_mode = false, auto_detect = false, "
+        f"encoding = {literal(feed.encoding)}, max_line_size = 16777216)"
     )
     broken = f"len({_CELLS}) <> {len(names)} or array_to_string({_CELLS}, {cut}) <> {_TEXT}"
     relation = (
