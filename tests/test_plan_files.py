@@ -92,7 +92,19 @@ def test_outside_series_that_make_no_sense_are_told(folder: Path, rows: str) -> 
     assert [key for key in problems(folder, sections(**RENTS)) if key.startswith("outside_series")]
 
 
+def test_leaf_that_is_sold_and_collected_elsewhere_is_told(folder: Path) -> None:
+    put(folder / "rents.csv", "heading,period,index\nM,2024-01,100\n")
+    assert "outside_series.file" in problems(folder, sections(**RENTS))
+
+
+def test_outside_series_beside_weights_from_turnover_are_told(folder: Path) -> None:
+    put(folder / "rents.csv", "heading,period,index\nM,2024-01,100\n")
+    put(folder / "assignment.csv", "item,ea\nB,S\n")
+    assert set(problems(folder, sections(weights={"source": "turnover"}, **RENTS))) == {"weights.source"}
+
+
 def test_outside_series_that_names_a_leaf_is_fine(folder: Path) -> None:
+    put(folder / "assignment.csv", "item,ea\nB,S\n")
     put(folder / "rents.csv", "heading,period,index\nM,2024-01,100\n")
     _, references = read(folder, sections(**RENTS))
     assert references.outside.height == 1

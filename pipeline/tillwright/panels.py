@@ -166,7 +166,7 @@ def _check_once(at: NDArray[np.int64], size: int, rows: pl.DataFrame, keys: list
         first = rows.row(int(np.flatnonzero(taken[at] > 1)[0]), named=True)
         example = ", ".join(f"{key} {first[key]}" for key in keys)
         raise BadPanel(
-            f"{int((taken > 1).sum())} pairs of product and period occur more than once (first: {example}). A panel "
+            f"Products occur more than once in a period, {int((taken > 1).sum())} times (first: {example}). A panel "
             "has one row per product and period: sum turnover and quantity to unit values first, or name the column "
             "that tells the rows apart with by."
         )

@@ -14,7 +14,6 @@ from tillwright.kernels.chaining import Aggregate, WeightYear, aggregate, update
 Array = NDArray[np.float64]
 
 AS_THEY_STAND = np.array([], dtype=np.intp)
-
 # Headings of the published tables: 0 total, 1 G over A, B, C, 2 H over D, E, then A to E themselves.
 PRINTED_PATHS = np.array([[3, 1, 0], [4, 1, 0], [5, 1, 0], [6, 2, 0], [7, 2, 0]])
 TOTAL, G, H, ELEMENTARY = 0, 1, 2, slice(3, 8)
@@ -107,23 +106,20 @@ def below(made: Made, heading: int) -> list[int]:
 
 def carry(year: WeightYear, complete: Array) -> list[float]:
     """Weights of a year at prices of its link."""
-    weights: list[float] = year.weights.tolist()
-    if not len(year.base):
-        return weights
-    means = [sum(complete[b, i] for b in year.base) / len(year.base) for i in range(len(weights))]
-    return [float(w * complete[year.link, i] / means[i]) for i, w in enumerate(weights)]
+    base = year.base.tolist() or [year.link]
+    means = [sum(complete[b, i] for b in base) / len(base) for i in range(len(year.weights))]
+    return [float(w * complete[year.link, i] / means[i]) for i, w in enumerate(year.weights)]
 
 
 def movement(made: Made, complete: Array, year: WeightYear, i: int, t: int) -> float:
     """M(t) of the nearest heading above component i that has one."""
-    weights = carry(year, complete)
+    weights, link = carry(year, complete), complete[year.link]
     for h in made.paths[i].tolist():
         total = moved = 0.0
         for j in below(made, h):
             if isfinite(made.levels[t - 1, j]) and isfinite(made.levels[t, j]):
-                v = float(weights[j] * complete[t - 1, j] / complete[year.link, j])
-                total += v
-                moved += v * float(made.levels[t, j] / made.levels[t - 1, j])
+                v = float(weights[j] * complete[t - 1, j] / link[j])
+                total, moved = total + v, moved + v * float(made.levels[t, j] / made.levels[t - 1, j])
         if total > 0:
             return moved / total
     return 1.0
@@ -147,21 +143,20 @@ def complete_levels(made: Made) -> Array:
 
 def twin(made: Made) -> Aggregate:
     """Every result by loops over the definition in the docstring."""
-    complete, (periods, components) = complete_levels(made), made.levels.shape
-    index, weight, imputed, points = (np.zeros((periods, made.headings)) for _ in range(4))
+    complete = complete_levels(made)
+    index, weight, imputed, points = (np.zeros((len(complete), made.headings)) for _ in range(4))
     index[0] = 1
     for year in made.years:
         weights = carry(year, complete)
         for t in range(year.first, year.last + 1):
-            relative = [complete[t, i] / complete[year.link, i] for i in range(components)]
+            relative = complete[t] / complete[year.link]
             for h in range(made.headings):
                 of_h = sum(weights[i] for i in below(made, h))
                 ratio = sum(weights[i] * relative[i] for i in below(made, h)) / of_h
-                step = index[year.link, 0] * (ratio - 1) * of_h / sum(weights)
                 index[t, h] = index[year.link, h] * ratio
                 weight[t, h] = of_h / sum(weights)
                 imputed[t, h] = sum(weights[i] for i in below(made, h) if not isfinite(made.levels[t, i])) / of_h
-                points[t, h] = points[year.link, h] + step
+                points[t, h] = points[year.link, h] + index[year.link, 0] * (ratio - 1) * of_h / sum(weights)
     for h in range(made.headings):
         if not any(map(isfinite, made.levels[:, below(made, h)].ravel())):
             index[:, h] = np.nan
@@ -248,7 +243,7 @@ def two(m: list[float], s: list[float], *years: WeightYear) -> Aggregate:
 def test_a_missing_component_moves_with_the_others_and_comes_back_at_its_own_level() -> None:
     # 60/40: M rises by half, 0.6 · 1.5 + 0.4 = 1.3; then it is carried by S, which stands still.
     result = two([1, 1.5, np.nan, 1.5], [1, 1, 1, 1], WeightYear(0, 0, 3, np.array([60.0, 40.0]), AS_THEY_STAND))
-    expected = [[1, 1.3, 1.3, 1.3], [1, 1.5, 1.5, 1.5]]
+    expected = [[1.0, 1.3, 1.3, 1.3], [1.0, 1.5, 1.5, 1.5]]
     np.testing.assert_allclose(result.index[:, [TOTAL, M]].T, expected, rtol=tolerances.EXACT)
     np.testing.assert_allclose(result.imputed[:, TOTAL], [0, 0, 0.6, 0], rtol=0, atol=tolerances.EXACT)
 
@@ -257,8 +252,8 @@ def test_a_missing_component_moves_with_the_others_and_comes_back_at_its_own_lev
 def test_a_component_missing_at_the_link_comes_back_at_its_own_level(base: NDArray[np.intp]) -> None:
     # S stands still, so M is 1 at the link; half of M's doubling after it is 1.5.
     years = WeightYear(0, 0, 1, HALVES, AS_THEY_STAND), WeightYear(1, 2, 3, HALVES, base)
-    index = two([1, np.nan, 1, 2], [1, 1, 1, 1], *years).index
-    np.testing.assert_allclose(index[:, [TOTAL, M]].T, [[1, 1, 1, 1.5], [1, 1, 1, 2]], rtol=tolerances.EXACT)
+    index = two([1, np.nan, 1, 2], [1, 1, 1, 1], *years).index[:, [TOTAL, M]].T
+    np.testing.assert_allclose(index, [[1.0, 1.0, 1.0, 1.5], [1.0, 1.0, 1.0, 2.0]], rtol=tolerances.EXACT)
 
 
 def test_a_component_missing_at_one_link_has_its_own_levels_at_the_next_and_after() -> None:
@@ -270,8 +265,9 @@ def test_a_component_missing_at_one_link_has_its_own_levels_at_the_next_and_afte
 
 def test_the_first_level_of_a_late_component_counts_as_having_moved_with_the_others() -> None:
     # S rises to 1.2 and 1.5 while M is not there yet; 10 in period 2 is therefore 10/1.5 in period 0.
-    index = two([np.nan, np.nan, 10, 20], [1, 1.2, 1.5, 1.5], WeightYear(0, 0, 3, HALVES, AS_THEY_STAND)).index
-    np.testing.assert_allclose(index[:, [TOTAL, M]].T, [[1, 1.2, 1.5, 2.25], [1, 1.2, 1.5, 3]], rtol=tolerances.EXACT)
+    year = WeightYear(0, 0, 3, HALVES, AS_THEY_STAND)
+    index = two([np.nan, np.nan, 10, 20], [1, 1.2, 1.5, 1.5], year).index[:, [TOTAL, M]].T
+    np.testing.assert_allclose(index, [[1.0, 1.2, 1.5, 2.25], [1.0, 1.2, 1.5, 3.0]], rtol=tolerances.EXACT)
 
 
 @pytest.mark.parametrize("missing", MISSING)
@@ -294,8 +290,7 @@ def test_price_updating_is_neutral(seed: int, missing: str) -> None:
     weights = made.years[0].weights
     direct = replace(made, years=[WeightYear(0, 0, PERIODS - 1, weights, AS_THEY_STAND)])
     stretches = [(max(t - 1, 0), t, t) for t in range(PERIODS)]
-    by_base = [WeightYear(*stretch, weights, base) for stretch in stretches]
-    complete = complete_levels(direct)
+    by_base, complete = [WeightYear(*s, weights, base) for s in stretches], complete_levels(direct)
     updated = [WeightYear(*s, update_weights(weights, complete, s[0], base), AS_THEY_STAND) for s in stretches]
     for years in (by_base, updated):
         linked = replace(made, years=years).result()
@@ -314,10 +309,9 @@ def test_weights_are_updated_from_the_mean_of_the_base_periods_and_stand_without
 def test_updating_weights_is_neutral_to_a_component_imputed_by_the_same_movement() -> None:
     # A rises to 1.4, B stands still, M is missing at the link and carried to their mean, 1.2.
     levels, weights = np.array([[1.0, 1.0, 1.0], [1.4, 1.0, np.nan], [1.4, 1.0, 1.8]]), np.array([0.25, 0.25, 0.5])
-    base = np.array([0])
-    carried = update_weights(weights, np.array([[1.0, 1.0, 1.0], [1.4, 1.0, 1.2]]), 1, base)
+    carried = update_weights(weights, np.array([[1.0, 1.0, 1.0], [1.4, 1.0, 1.2]]), 1, np.array([0]))
     np.testing.assert_allclose(carried, [0.35, 0.25, 0.6], rtol=tolerances.EXACT)
-    years = [WeightYear(0, 0, 1, weights, AS_THEY_STAND), WeightYear(1, 2, 2, weights, base)]
+    years = [WeightYear(0, 0, 1, weights, AS_THEY_STAND), WeightYear(1, 2, 2, weights, np.array([0]))]
     result = aggregate(levels, years, np.array([[1, 0], [2, 0], [3, 0]]), 4)
     np.testing.assert_allclose(result.weight[2], [1, 0.35 / 1.2, 0.25 / 1.2, 0.5], rtol=tolerances.EXACT)
     # All items: 0.25 · 1.4 + 0.25 + 0.5 · 1.8, as if there were no link.

@@ -71,7 +71,7 @@ def aggregate(levels: Array, years: list[WeightYear], paths: NDArray[np.intp], h
     """
     below = _membership(paths, headings)
     shape = (len(levels), headings)
-    index, weight, imputed, steps = np.ones(shape), np.zeros(shape), np.zeros(shape), np.zeros(shape)
+    index, weight, imputed, points = np.ones(shape), np.zeros(shape), np.zeros(shape), np.zeros(shape)
     complete = _Completion(levels, below, paths)
     for year in years:
         weights = update_weights(year.weights, complete.levels, year.link, year.base)
@@ -86,9 +86,9 @@ def aggregate(levels: Array, years: list[WeightYear], paths: NDArray[np.intp], h
         weight[rows] = weighs
         unknown = ~np.isfinite(levels[rows]) * shares @ below.T
         np.divide(unknown, weighs, out=imputed[rows], where=weighs > 0)
-        steps[rows] = chain[0] * np.diff(totals, axis=0, prepend=weighs[None, :])
+        points[rows] = points[year.link] + chain[0] * (totals - weighs)
     index[:, below @ np.isfinite(levels).any(axis=0) == 0] = np.nan
-    return Aggregate(index, weight, imputed, np.cumsum(steps, axis=0))
+    return Aggregate(index, weight, imputed, points)
 
 
 def update_weights(weights: Array, levels: Array, link: int, base: NDArray[np.intp]) -> Array:

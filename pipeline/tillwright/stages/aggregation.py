@@ -76,6 +76,7 @@ def _paths(leaves: tuple[str, ...], tree: Tree, order: list[str]) -> NDArray[np.
 def _frame(context: Context, result: Aggregate, order: list[str], periods: pl.Series) -> pl.DataFrame:
     tree, year = context.references.tree, periods_a_year(context.plan.plan.period)
     index = result.index * _scale(context.plan, result.index, periods)
+    index[result.imputed[:, 0] > 1.0 - _ADDITIVE_TO] = np.nan  # a period of which nothing is known has no index
     contributions = {lag: measure_contributions(result.points, result.index[:, 0], lag) for lag in (1, year)}
     leaves = [order.index(leaf) for leaf in tree.leaves]
     columns = {
@@ -88,6 +89,7 @@ def _frame(context: Context, result: Aggregate, order: list[str], periods: pl.Se
         "contribution_year": contributions[year],
     }
     for lag in ("period", "year"):
+        columns[f"contribution_{lag}"][~np.isfinite(columns[f"change_{lag}"][:, 0])] = np.nan
         _check_additive(columns[f"contribution_{lag}"][:, leaves], columns[f"change_{lag}"][:, 0])
     frame = pl.DataFrame(
         {
