@@ -9,9 +9,24 @@ MonthRule: TypeAlias = Literal["calendar", "whole-weeks", "first-weeks"]
 Returns: TypeAlias = Literal["net", "refuse"]
 ItemCode: TypeAlias = Literal["any", "gtin"]
 StratumRole: TypeAlias = Literal["feed", "region", "outlet", "household_group"]
-Bilateral: TypeAlias = Literal["jevons", "dutot", "fisher", "tornqvist"]
-Geks: TypeAlias = Literal["geks-fisher", "geks-tornqvist"]
-Method: TypeAlias = Literal["jevons", "dutot", "fisher", "tornqvist", "geks-fisher", "geks-tornqvist"]
+Bilateral: TypeAlias = Literal[
+    "jevons",
+    "dutot",
+    "carli",
+    "harmonic",
+    "cswd",
+    "laspeyres",
+    "paasche",
+    "fisher",
+    "tornqvist",
+    "walsh",
+    "marshall-edgeworth",
+    "geometric-laspeyres",
+    "geometric-paasche",
+    "palgrave",
+]
+Geks: TypeAlias = Literal["geks-jevons", "geks-fisher", "geks-tornqvist", "geks-walsh"]
+Method: TypeAlias = Bilateral | Geks
 Form: TypeAlias = Literal["chained", "direct"]
 Splice: TypeAlias = Literal["movement", "window", "half", "mean"]
 Onto: TypeAlias = Literal["published", "recalculated"]
@@ -23,7 +38,7 @@ Gate: TypeAlias = Literal[
 
 BILATERAL_FORMULAS: tuple[Bilateral, ...] = get_args(Bilateral)
 GEKS_METHODS: tuple[Geks, ...] = get_args(Geks)
-METHODS: tuple[Method, ...] = get_args(Method)
+METHODS: tuple[Method, ...] = (*BILATERAL_FORMULAS, *GEKS_METHODS)
 FORMS: tuple[Form, ...] = get_args(Form)
 SPLICES: tuple[Splice, ...] = get_args(Splice)
 ONTO: tuple[Onto, ...] = get_args(Onto)

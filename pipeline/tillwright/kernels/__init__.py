@@ -9,6 +9,7 @@ Notation, used in every kernel:
     m       (T, N)  1.0 where a product is priced, else 0.0
     x       (T, N)  expenditure p * q, 0 where not sold
     l       (T, N)  log price, centred per product, 0 where not sold
+    e       (T, N)  exp(l): price relative to the product's own geometric mean, 0 where not sold
     P[s,t]  (T, T)  index level of period t relative to period s, base 1
     W, K            window length in periods; number of windows, K = T - W + 1
 """

@@ -25,19 +25,88 @@ def dutot(pair_sum: PairSum) -> Array:
     Depends on the units that products are measured in.
     Reference: ILO et al. (2004), Consumer Price Index Manual, ch. 9.
     """
-    ratio: Array = np.log(pair_sum("m", "p") / pair_sum("p", "m"))
-    return ratio
+    return _log(pair_sum("m", "p") / pair_sum("p", "m"))
+
+
+def carli(pair_sum: PairSum) -> Array:
+    """Log of the arithmetic mean of price relatives, (1/n) Σ p_t/p_s; fails time reversal upwards.
+
+    Reference: ILO et al. (2004), Consumer Price Index Manual, ch. 9.
+    """
+    return _log(pair_sum("1/e", "e") / pair_sum("m", "m"))
+
+
+def harmonic(pair_sum: PairSum) -> Array:
+    """Log of the harmonic mean of price relatives, n / Σ p_s/p_t; fails time reversal downwards.
+
+    Reference: ILO et al. (2004), Consumer Price Index Manual, ch. 20.
+    """
+    return _log(pair_sum("m", "m") / pair_sum("e", "1/e"))
+
+
+def cswd(pair_sum: PairSum) -> Array:
+    """Log of the geometric mean of Carli and harmonic (Carruthers, Sellwood & Ward; Dalén).
+
+    Reference: ILO et al. (2004), Consumer Price Index Manual, ch. 20.
+    """
+    return 0.5 * (carli(pair_sum) + harmonic(pair_sum))
+
+
+def laspeyres(pair_sum: PairSum) -> Array:
+    """Log of Σ p_t q_s / Σ p_s q_s over matched products.
+
+    Reference: ILO et al. (2004), Consumer Price Index Manual, ch. 15.
+    """
+    return _log(pair_sum("q", "p") / pair_sum("x", "m"))
+
+
+def paasche(pair_sum: PairSum) -> Array:
+    """Log of Σ p_t q_t / Σ p_s q_t over matched products.
+
+    Reference: ILO et al. (2004), Consumer Price Index Manual, ch. 15.
+    """
+    return _log(pair_sum("m", "x") / pair_sum("p", "q"))
 
 
 def fisher(pair_sum: PairSum) -> Array:
     """Log of the geometric mean of Laspeyres and Paasche, √(L·P).
 
-    L = Σ p_t q_s / Σ p_s q_s, P = Σ p_t q_t / Σ p_s q_t.
     Reference: ILO et al. (2004), Consumer Price Index Manual, ch. 15.
     """
-    laspeyres = pair_sum("q", "p") / pair_sum("x", "m")
-    paasche = pair_sum("m", "x") / pair_sum("p", "q")
-    mean: Array = 0.5 * np.log(laspeyres * paasche)
+    return 0.5 * (laspeyres(pair_sum) + paasche(pair_sum))
+
+
+def walsh(pair_sum: PairSum) -> Array:
+    """Log of Σ p_t √(q_s q_t) / Σ p_s √(q_s q_t) over matched products.
+
+    Reference: ILO et al. (2004), Consumer Price Index Manual, ch. 15.
+    """
+    return _log(pair_sum("√q", "p√q") / pair_sum("p√q", "√q"))
+
+
+def marshall_edgeworth(pair_sum: PairSum) -> Array:
+    """Log of Σ p_t (q_s + q_t) / Σ p_s (q_s + q_t) over matched products.
+
+    Reference: ILO et al. (2004), Consumer Price Index Manual, ch. 15.
+    """
+    return _log((pair_sum("q", "p") + pair_sum("m", "x")) / (pair_sum("x", "m") + pair_sum("p", "q")))
+
+
+def geometric_laspeyres(pair_sum: PairSum) -> Array:
+    """Log of Π (p_t/p_s)^s_s, shares of the base period over matched products.
+
+    Reference: ILO et al. (2004), Consumer Price Index Manual, ch. 1 and 19.
+    """
+    mean: Array = (pair_sum("x", "l") - pair_sum("xl", "m")) / pair_sum("x", "m")
+    return mean
+
+
+def geometric_paasche(pair_sum: PairSum) -> Array:
+    """Log of Π (p_t/p_s)^s_t, shares of the current period over matched products.
+
+    Reference: ILO et al. (2004), Consumer Price Index Manual, ch. 19.
+    """
+    mean: Array = (pair_sum("m", "xl") - pair_sum("l", "x")) / pair_sum("m", "x")
     return mean
 
 
@@ -46,18 +115,39 @@ def tornqvist(pair_sum: PairSum) -> Array:
 
     Reference: ILO et al. (2004), Consumer Price Index Manual, ch. 16.
     """
-    base_weighted = (pair_sum("x", "l") - pair_sum("xl", "m")) / pair_sum("x", "m")
-    current_weighted = (pair_sum("m", "xl") - pair_sum("l", "x")) / pair_sum("m", "x")
-    return 0.5 * (base_weighted + current_weighted)
+    return 0.5 * (geometric_laspeyres(pair_sum) + geometric_paasche(pair_sum))
+
+
+def palgrave(pair_sum: PairSum) -> Array:
+    """Log of Σ s_t·(p_t/p_s), shares of the current period over matched products.
+
+    Reference: ILO et al. (2004), Consumer Price Index Manual, ch. 19.
+    """
+    return _log(pair_sum("1/e", "xe") / pair_sum("m", "x"))
+
+
+def _log(ratio: Array) -> Array:
+    logs: Array = np.log(ratio)
+    return logs
 
 
 FORMULAS: dict[str, Callable[[PairSum], Array]] = {
     "jevons": jevons,
     "dutot": dutot,
+    "carli": carli,
+    "harmonic": harmonic,
+    "cswd": cswd,
+    "laspeyres": laspeyres,
+    "paasche": paasche,
     "fisher": fisher,
     "tornqvist": tornqvist,
+    "walsh": walsh,
+    "marshall-edgeworth": marshall_edgeworth,
+    "geometric-laspeyres": geometric_laspeyres,
+    "geometric-paasche": geometric_paasche,
+    "palgrave": palgrave,
 }
-PRICES_ONLY = frozenset({"jevons", "dutot"})
+PRICES_ONLY = frozenset({"jevons", "dutot", "carli", "harmonic", "cswd"})
 
 
 def log_pair_levels(prices: Array, quantities: Array | None, formula: str, *, span: int | None = None) -> Array:

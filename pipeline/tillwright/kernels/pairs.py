@@ -75,7 +75,8 @@ def make_fields(prices: Array, quantities: Array | None) -> Callable[[str], Arra
 
     Returns
     -------
-    A function from a field's name to its (T, N) array: ``m`` ``p`` ``q`` ``x`` ``l`` ``xl``.
+    A function from a field's name to its (T, N) array: ``m`` ``p`` ``q`` ``x`` ``l`` ``e`` and products
+    of them named by their factors.
     Log prices are centred per product, which cancels in every relative and keeps the digits of
     products whose price level is extreme.
     """
@@ -85,11 +86,16 @@ def make_fields(prices: Array, quantities: Array | None) -> Callable[[str], Arra
         "m": lambda: sold.astype(np.float64),
         "p": lambda: np.where(sold, prices, 0.0),
         "l": lambda: _centred_logs(prices, sold),
+        "e": lambda: np.where(sold, np.exp(field("l")), 0.0),
+        "1/e": lambda: np.where(sold, np.exp(-field("l")), 0.0),
     }
     if quantities is not None:
         makers["q"] = lambda: np.where(sold, quantities, 0.0)
         makers["x"] = lambda: field("p") * field("q")
         makers["xl"] = lambda: field("x") * field("l")
+        makers["xe"] = lambda: field("x") * field("e")
+        makers["√q"] = lambda: np.sqrt(field("q"))
+        makers["p√q"] = lambda: field("p") * field("√q")
 
     def field(name: str) -> Array:
         if name not in kept:
