@@ -348,3 +348,10 @@ def test_weights_are_shares_and_those_of_a_heading_are_the_sum_of_what_lies_belo
     for h in range(made.headings):
         parts = weight[:, made.headings :][:, below(made, h)].sum(axis=1)
         np.testing.assert_allclose(weight[:, h], parts, rtol=tolerances.EXACT)
+
+
+def test_heading_that_weighs_nothing_in_a_year_has_the_level_of_its_component() -> None:
+    """The limit of the definition as the weight goes to 0."""
+    years = [WeightYear(0, 0, 1, np.array([1.0, 0.0]), AS_THEY_STAND)]
+    found = aggregate(np.array([[1.0, 1.0], [2.0, 3.0]]), years, np.array([[1, 0], [2, 0]]), 3)
+    np.testing.assert_allclose(found.index, [[1.0, 1.0, 1.0], [2.0, 2.0, 3.0]], rtol=tolerances.EXACT)

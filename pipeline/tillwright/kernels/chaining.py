@@ -56,7 +56,8 @@ def aggregate(levels: Array, years: list[WeightYear], paths: NDArray[np.intp], h
 
     over the components below h that have a level at t−1 and at t; 1 where no heading has any.  When a
     component comes back, it is at its own level again; before its first level it moves with the
-    heading, and its first level counts as having moved with it too.
+    heading, and its first level counts as having moved with it too.  Components below a heading that
+    weighs nothing in a year count alike within it.
 
     Parameters
     ----------
@@ -80,13 +81,14 @@ def aggregate(levels: Array, years: list[WeightYear], paths: NDArray[np.intp], h
         for row in range(year.first, year.last + 1):
             complete.reach(row, shares, year.link)
         weighs = below @ shares
-        totals = complete.levels[rows] / complete.levels[year.link] * shares @ below.T
+        within = below * np.where(weighs > 0, 1.0, 0.0)[:, None] * shares + below * (weighs == 0)[:, None]
+        within /= within.sum(axis=1, keepdims=True)
+        ratios = complete.levels[rows] / complete.levels[year.link]
         chain = index[year.link].copy()
-        index[rows] = chain * np.divide(totals, weighs, out=np.ones_like(totals), where=weighs > 0)
+        index[rows] = chain * (ratios @ within.T)
         weight[rows] = weighs
-        unknown = ~np.isfinite(levels[rows]) * shares @ below.T
-        np.divide(unknown, weighs, out=imputed[rows], where=weighs > 0)
-        points[rows] = points[year.link] + chain[0] * (totals - weighs)
+        imputed[rows] = ~np.isfinite(levels[rows]) @ within.T
+        points[rows] = points[year.link] + chain[0] * (ratios * shares @ below.T - weighs)
     index[:, below @ np.isfinite(levels).any(axis=0) == 0] = np.nan
     return Aggregate(index, weight, imputed, points)
 

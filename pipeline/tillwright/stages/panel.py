@@ -27,8 +27,8 @@ def make_panel(context: Context) -> int:
     if panel is None or panel.height == 0:
         raise DataError(
             f"No accepted sale from {context.plan.plan.start} on has an elementary aggregate, so there is no index to "
-            f"make; {_refused(context)}. Compare plan.start with the deliveries' dates, and classification.assignment with "
-            "the items."
+            f"make; {_refused(context)}. Compare plan.start with the deliveries' dates, and classification.assignment "
+            "with the items."
         )
     workspace.write("panel", panel)
     return panel.height

@@ -32,7 +32,7 @@ def weight_years(context: Context, components: Components, periods: pl.Series) -
 
     Raises
     ------
-    CallError : weights.file has no weights for a year.
+    CallError : weights.file has no weights for a year, or they are all 0.
     """
     plan = context.plan
     months = [year_and_month(day, plan.plan.period) for day in periods]
@@ -45,6 +45,8 @@ def weight_years(context: Context, components: Components, periods: pl.Series) -
         rows = [position for position, owner in enumerate(belongs) if owner == year]
         base = [n for n, (calendar, _) in enumerate(months) if calendar == year - 1] if updates and rows[0] > 0 else []
         weights = _weights(context, components, year, turnover)
+        if not weights.sum() > 0:
+            raise CallError(f"Nothing has a weight in {year}: weights.source is '{plan.weights.source}'.")
         link = max(rows[0] - 1, 0)
         years.append(WeightYear(link, rows[0], rows[-1], weights, np.array(base, dtype=np.intp)))
     return years
