@@ -30,6 +30,26 @@ class Table:
     by_delivery: bool = False
 
 
+_TOTALS: Types = {
+    "lines_received": pl.Int64,
+    "lines_accepted": pl.Int64,
+    "lines_refused": pl.Int64,
+    "turnover_received": EXACT,
+    "turnover_accepted": EXACT,
+    "turnover_refused": EXACT,
+    "first_day": pl.Date,
+    "last_day": pl.Date,
+}
+_PANEL: Types = {
+    "ea": pl.String,
+    "stratum": pl.String,
+    "product": pl.String,
+    "period": pl.Date,
+    "price": pl.Float64,
+    "quantity": EXACT,
+    "turnover": EXACT,
+    "lines": pl.Int64,
+}
 _DECLARED = (
     Table(
         "deliveries",
@@ -45,14 +65,7 @@ _DECLARED = (
             "replaced_by": pl.String,
             "sha256": pl.String,
             "bytes": pl.Int64,
-            "lines_received": pl.Int64,
-            "lines_accepted": pl.Int64,
-            "lines_refused": pl.Int64,
-            "turnover_received": EXACT,
-            "turnover_accepted": EXACT,
-            "turnover_refused": EXACT,
-            "first_day": pl.Date,
-            "last_day": pl.Date,
+            **_TOTALS,
         },
     ),
     Table(
@@ -62,14 +75,7 @@ _DECLARED = (
         ("delivery",),
         {
             "delivery": pl.String,
-            "lines_received": pl.Int64,
-            "lines_accepted": pl.Int64,
-            "lines_refused": pl.Int64,
-            "turnover_received": EXACT,
-            "turnover_accepted": EXACT,
-            "turnover_refused": EXACT,
-            "first_day": pl.Date,
-            "last_day": pl.Date,
+            **_TOTALS,
         },
         by_delivery=True,
     ),
@@ -186,16 +192,7 @@ _DECLARED = (
         3,
         "unit values: price in currency per unit is null where returns leave no positive sales",
         ("ea", "stratum", "product", "period"),
-        {
-            "ea": pl.String,
-            "stratum": pl.String,
-            "product": pl.String,
-            "period": pl.Date,
-            "price": pl.Float64,
-            "quantity": EXACT,
-            "turnover": EXACT,
-            "lines": pl.Int64,
-        },
+        _PANEL,
     ),
     Table(
         "screened",
@@ -203,14 +200,7 @@ _DECLARED = (
         "the panel with a verdict (kept, excluded) and a reason on every row",
         ("ea", "stratum", "product", "period"),
         {
-            "ea": pl.String,
-            "stratum": pl.String,
-            "product": pl.String,
-            "period": pl.Date,
-            "price": pl.Float64,
-            "quantity": EXACT,
-            "turnover": EXACT,
-            "lines": pl.Int64,
+            **_PANEL,
             "verdict": pl.String,
             "reason": pl.String,
         },
