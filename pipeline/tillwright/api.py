@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 import polars as pl
 
-from tillwright.choices import BILATERAL_FORMULAS, FORMS, GEKS_METHODS, ONTO, SPLICES, Form, Onto, Splice
+from tillwright.choices import BILATERAL_FORMULAS, FORMS, MULTILATERAL_METHODS, ONTO, SPLICES, Form, Onto, Splice
 from tillwright.errors import BadPanel, CallError, UnconnectedPeriods
 from tillwright.kernels.churn import count_matched, count_products
 from tillwright.kernels.methods import Recipe, make_index
@@ -75,7 +75,7 @@ def multilateral(
     Parameters
     ----------
     frame, by, period, product, price, quantity : as for `bilateral`.
-    method : one of `tillwright.choices.GEKS_METHODS`.
+    method : one of `tillwright.choices.MULTILATERAL_METHODS`.
     window : periods in a window, at least 2; None = one window over all periods.
     splice, onto : how later windows extend the series; see `tillwright.kernels.splicing`.
 
@@ -88,9 +88,9 @@ def multilateral(
     UnconnectedPeriods : the periods of a window share no chain of products.
     CallError, BadPanel, MissingColumns
 
-    Reference: `tillwright.kernels.geks`, `tillwright.kernels.splicing`.
+    Reference: `tillwright.kernels.geks`, `time_product_dummy`, `geary_khamis` and `splicing` beside it.
     """
-    _check_choice("method", method, GEKS_METHODS)
+    _check_choice("method", method, MULTILATERAL_METHODS)
     _check_choice("splice", splice, SPLICES)
     _check_choice("onto", onto, ONTO)
     if window is not None and window < 2:

@@ -26,7 +26,8 @@ Bilateral: TypeAlias = Literal[
     "palgrave",
 ]
 Geks: TypeAlias = Literal["geks-jevons", "geks-fisher", "geks-tornqvist", "geks-walsh"]
-Method: TypeAlias = Bilateral | Geks
+Multilateral: TypeAlias = Geks | Literal["tpd", "geary-khamis"]
+Method: TypeAlias = Bilateral | Multilateral
 Form: TypeAlias = Literal["chained", "direct"]
 Splice: TypeAlias = Literal["movement", "window", "half", "mean"]
 Onto: TypeAlias = Literal["published", "recalculated"]
@@ -38,7 +39,8 @@ Gate: TypeAlias = Literal[
 
 BILATERAL_FORMULAS: tuple[Bilateral, ...] = get_args(Bilateral)
 GEKS_METHODS: tuple[Geks, ...] = get_args(Geks)
-METHODS: tuple[Method, ...] = (*BILATERAL_FORMULAS, *GEKS_METHODS)
+MULTILATERAL_METHODS: tuple[Multilateral, ...] = (*GEKS_METHODS, "tpd", "geary-khamis")
+METHODS: tuple[Method, ...] = (*BILATERAL_FORMULAS, *MULTILATERAL_METHODS)
 FORMS: tuple[Form, ...] = get_args(Form)
 SPLICES: tuple[Splice, ...] = get_args(Splice)
 ONTO: tuple[Onto, ...] = get_args(Onto)

@@ -4,10 +4,10 @@ from __future__ import annotations
 
 import numpy as np
 from numpy.lib.stride_tricks import sliding_window_view
-from numpy.typing import NDArray
 
 from tillwright.errors import UnconnectedPeriods
 from tillwright.kernels.pairs import Array
+from tillwright.kernels.windows import anchor, connected_groups
 
 
 def window_levels(log_pairs: Array, window: int) -> Array:
@@ -41,9 +41,7 @@ def window_levels(log_pairs: Array, window: int) -> Array:
     levels = windows.mean(axis=1)
     for position in np.flatnonzero(~np.isfinite(levels).all(axis=1)):
         levels[position] = _fit_incomplete(windows[position], int(position))
-    first = np.isfinite(levels).argmax(axis=1)
-    anchored: Array = levels - levels[np.arange(len(levels)), first][:, None]
-    return anchored
+    return anchor(levels)
 
 
 def _fit_incomplete(pairs: Array, start: int) -> Array:
@@ -62,12 +60,3 @@ def _fit_incomplete(pairs: Array, start: int) -> Array:
     observed = np.where(linked, pairs[np.ix_(priced, priced)], 0.0).sum(axis=0)
     levels[priced] = np.linalg.solve(laplacian + 1.0 / priced.size, observed)
     return levels
-
-
-def connected_groups(linked: NDArray[np.bool_]) -> list[NDArray[np.intp]]:
-    """Positions of each connected group of a symmetric (n, n) adjacency, in order of first member."""
-    reach = linked | np.eye(len(linked), dtype=bool)
-    for _ in range(max(int(np.ceil(np.log2(len(linked)))), 1)):
-        reach = (reach.astype(np.float64) @ reach.astype(np.float64)) > 0
-    leaders = reach.argmax(axis=1)
-    return [np.flatnonzero(leaders == leader) for leader in np.unique(leaders)]

@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Literal
 
 import numpy as np
 
+from tillwright.kernels import geary_khamis, geks, time_product_dummy
 from tillwright.kernels.bilateral import FORMULAS, PRICES_ONLY, log_pair_levels, series
-from tillwright.kernels.geks import window_levels
 from tillwright.kernels.pairs import Array
 from tillwright.kernels.splicing import splice
 
@@ -50,15 +51,29 @@ def make_index(prices: Array, quantities: Array | None, recipe: Recipe) -> Array
     ------
     UnconnectedPeriods : a multilateral window without a chain of common products.
 
-    Reference: `kernels.bilateral`, `kernels.geks`, `kernels.splicing`.
+    Reference: `kernels.bilateral`, `kernels.geks`, `kernels.time_product_dummy`, `kernels.geary_khamis`,
+    `kernels.splicing`.
     """
     if recipe.method in FORMULAS:
         return series(prices, quantities, recipe.method, form=recipe.form)
-    formula = recipe.method.removeprefix("geks-")
     window = len(prices) if recipe.window is None else recipe.window
-    span = None if window >= len(prices) else window - 1
-    log_pairs = log_pair_levels(prices, quantities, formula, span=span)
-    levels = window_levels(log_pairs, window)
+    levels = _window_levels(prices, quantities, recipe.method, window)
     index: Array = splice(levels, splice=recipe.splice, onto=recipe.onto)
     index[~np.isfinite(prices).any(axis=1)] = np.nan
     return index
+
+
+def _window_levels(prices: Array, quantities: Array | None, method: str, window: int) -> Array:
+    if method.startswith("geks-"):
+        span = None if window >= len(prices) else window - 1
+        log_pairs = log_pair_levels(prices, quantities, method.removeprefix("geks-"), span=span)
+        return geks.window_levels(log_pairs, window)
+    if quantities is None:
+        raise ValueError(f"method {method!r} needs quantities")
+    return _DIRECT[method](prices, quantities, window)
+
+
+_DIRECT: dict[str, Callable[[Array, Array, int], Array]] = {
+    "tpd": time_product_dummy.window_levels,
+    "geary-khamis": geary_khamis.window_levels,
+}
