@@ -12,7 +12,7 @@ import pytest
 
 import tillwright as tw
 from tests.reference.published import cases, dataset
-from tillwright.choices import BILATERAL_FORMULAS, FORMS, GEKS_METHODS, ONTO, SPLICES
+from tillwright.choices import BILATERAL_FORMULAS, FORMS, MULTILATERAL_METHODS, ONTO, SPLICES
 from tillwright.errors import BadPanel, CallError, MissingColumns, UnconnectedPeriods
 
 # The order of rows may change the order of sums, no more.
@@ -96,7 +96,7 @@ def test_published_chain_drift_example_comes_out_of_frames() -> None:
     (chained,) = cases("chaindrift_fisher_ch")
     found = tw.bilateral(frame, "fisher", form="chained")["index"].to_numpy() / 100
     np.testing.assert_allclose(found, chained.expected, rtol=0, atol=chained.tolerance)
-    for method in GEKS_METHODS:
+    for method in MULTILATERAL_METHODS:
         assert tw.multilateral(frame, method)["index"][-1] == pytest.approx(100.0, rel=1e-12)
 
 
@@ -157,7 +157,7 @@ def test_a_period_without_products_inside_a_group_has_no_index_and_is_stepped_ov
     assert index["index"].is_null().to_list() == [False, False, True, False]
 
 
-@pytest.mark.parametrize("method", [*BILATERAL_FORMULAS, *GEKS_METHODS])
+@pytest.mark.parametrize("method", [*BILATERAL_FORMULAS, *MULTILATERAL_METHODS])
 def test_a_null_or_nan_price_means_not_sold(method: str) -> None:
     call = tw.bilateral if method in BILATERAL_FORMULAS else tw.multilateral
     dropped = panel().filter(pl.col("price").is_not_null())
@@ -166,7 +166,7 @@ def test_a_null_or_nan_price_means_not_sold(method: str) -> None:
     assert call(as_nan, method).equals(call(dropped, method))
 
 
-@pytest.mark.parametrize("method", [*BILATERAL_FORMULAS, *GEKS_METHODS])
+@pytest.mark.parametrize("method", [*BILATERAL_FORMULAS, *MULTILATERAL_METHODS])
 def test_the_order_of_rows_does_not_matter(method: str) -> None:
     call = tw.bilateral if method in BILATERAL_FORMULAS else tw.multilateral
     expected = call(two_groups(), method, by="ea")
@@ -230,7 +230,13 @@ def test_import_loads_neither_prefect_nor_duckdb() -> None:
 
 @pytest.mark.parametrize("name", ["formula", "form", "method", "splice", "onto"])
 def test_an_unknown_choice_is_told_with_those_allowed(name: str) -> None:
-    allowed = {"formula": BILATERAL_FORMULAS, "form": FORMS, "method": GEKS_METHODS, "splice": SPLICES, "onto": ONTO}
+    allowed = {
+        "formula": BILATERAL_FORMULAS,
+        "form": FORMS,
+        "method": MULTILATERAL_METHODS,
+        "splice": SPLICES,
+        "onto": ONTO,
+    }
     calls: dict[str, Any] = {
         "formula": lambda: tw.bilateral(panel(), "nonesuch"),
         "form": lambda: tw.bilateral(panel(), "jevons", form="nonesuch"),  # type: ignore[arg-type]

@@ -12,7 +12,7 @@ import pytest
 from click.testing import CliRunner, Result
 
 import tillwright as tw
-from tillwright.choices import BILATERAL_FORMULAS, FORMS, GEKS_METHODS, METHODS, ONTO, SPLICES
+from tillwright.choices import BILATERAL_FORMULAS, FORMS, METHODS, MULTILATERAL_METHODS, ONTO, SPLICES
 from tillwright.cli import commands
 
 MONTHS = ("2024-01", "2024-02", "2024-03", "2024-04", "2024-05")
@@ -225,4 +225,4 @@ def test_what_was_written_is_told_as_text_and_as_json(index: Index, tmp_path: Pa
 
 
 def test_the_methods_on_offer_are_the_formulas_and_the_multilateral_methods() -> None:
-    assert set(METHODS) == set(BILATERAL_FORMULAS) | set(GEKS_METHODS)
+    assert set(METHODS) == set(BILATERAL_FORMULAS) | set(MULTILATERAL_METHODS)

@@ -46,9 +46,12 @@ def by_iteration(prices: Array, quantities: Array) -> Array:
         following = np.nansum(prices * quantities, axis=1) / np.where(sold, quantities * mean, 0.0).sum(axis=1)
         following /= following[0]
         if np.abs(following / levels - 1).max() < FIXED_POINT:
-            return np.log(following)
+            break
         levels = following
-    raise AssertionError("the iteration does not arrive")
+    else:
+        pytest.fail("the iteration does not arrive")
+    logs: Array = np.log(following)
+    return logs
 
 
 def connected() -> list[tuple[Array, Array]]:
