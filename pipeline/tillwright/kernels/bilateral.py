@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
+from functools import cache
 from typing import Literal
 
 import numpy as np
@@ -216,7 +217,8 @@ def series(
     return result
 
 
-def wanted_pairs(formula: str) -> list[Pair]:
+@cache
+def wanted_pairs(formula: str) -> tuple[Pair, ...]:
     """Sums that a formula asks for, found by letting it ask; the first tells which pairs have a match."""
     asked: list[Pair] = []
 
@@ -226,7 +228,7 @@ def wanted_pairs(formula: str) -> list[Pair]:
 
     FORMULAS[formula](note)
     match = ("x", "m") if ("x", "m") in asked else ("m", "m")
-    return [match, *asked]
+    return (match, *asked)
 
 
 def _where_matched(formula: str, pair_sum: PairSum) -> tuple[Array, np.ndarray]:

@@ -3,9 +3,10 @@
 from __future__ import annotations
 
 import numpy as np
+from numpy.typing import NDArray
 
 from tillwright.kernels.pairs import Array
-from tillwright.kernels.windows import anchor, check_connected
+from tillwright.kernels.windows import fit_windows
 
 
 def window_levels(prices: Array, quantities: Array, window: int) -> Array:
@@ -31,30 +32,16 @@ def window_levels(prices: Array, quantities: Array, window: int) -> Array:
 
     Reference: Geary (1958); Khamis (1972); Chessa (2016); as a linear system, Diewert (1999).
     """
-    length = min(window, len(prices))
-    rows = [
-        _one_window(prices[start : start + length], quantities[start : start + length], start)
-        for start in range(len(prices) - length + 1)
-    ]
-    return anchor(np.array(rows))
+    return fit_windows(prices, quantities, window, _fit)
 
 
-def _one_window(prices: Array, quantities: Array, start: int) -> Array:
-    sold = np.isfinite(prices)
-    priced = sold.any(axis=1)
-    levels = np.full(len(prices), np.nan)
-    columns = sold.any(axis=0)
-    sold, prices, quantities = sold[priced][:, columns], prices[priced][:, columns], quantities[priced][:, columns]
-    if sold.size == 0:
-        return levels
-    check_connected(sold, np.flatnonzero(priced) + start)
-    amount = np.where(sold, quantities, 0.0)
-    value = np.where(sold, prices * quantities, 0.0)
+def _fit(prices: Array, quantities: Array, _: NDArray[np.bool_]) -> Array:
+    value = prices * quantities
     turnover = value.sum(axis=1)
     # Unknowns are u times turnover, so that columns are alike in size whatever prices do.
-    system = np.eye(len(turnover)) - ((amount / amount.sum(axis=0)) @ value.T) / turnover[None, :]
+    system = np.eye(len(turnover)) - ((quantities / quantities.sum(axis=0)) @ value.T) / turnover[None, :]
     scaled = np.ones(len(turnover))
     if len(turnover) > 1:
         scaled[1:] = np.linalg.solve(system[1:, 1:], -system[1:, 0])
-    levels[priced] = np.log(turnover) - np.log(scaled)
+    levels: Array = np.log(turnover) - np.log(scaled)
     return levels

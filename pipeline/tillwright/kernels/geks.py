@@ -5,9 +5,8 @@ from __future__ import annotations
 import numpy as np
 from numpy.lib.stride_tricks import sliding_window_view
 
-from tillwright.errors import UnconnectedPeriods
 from tillwright.kernels.pairs import Array
-from tillwright.kernels.windows import anchor, connected_groups
+from tillwright.kernels.windows import anchor, check_connected
 
 
 def window_levels(log_pairs: Array, window: int) -> Array:
@@ -52,9 +51,7 @@ def _fit_incomplete(pairs: Array, start: int) -> Array:
     if priced.size == 0:
         return levels
     linked = present[np.ix_(priced, priced)]
-    groups = connected_groups(linked)
-    if len(groups) > 1:
-        raise UnconnectedPeriods([[start + int(priced[member]) for member in group] for group in groups])
+    check_connected(linked, start + priced)
     weights = linked.astype(np.float64)
     laplacian = np.diag(weights.sum(axis=1)) - weights
     observed = np.where(linked, pairs[np.ix_(priced, priced)], 0.0).sum(axis=0)

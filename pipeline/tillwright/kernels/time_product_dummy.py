@@ -3,9 +3,10 @@
 from __future__ import annotations
 
 import numpy as np
+from numpy.typing import NDArray
 
 from tillwright.kernels.pairs import Array
-from tillwright.kernels.windows import anchor, check_connected
+from tillwright.kernels.windows import fit_windows
 
 
 def window_levels(prices: Array, quantities: Array, window: int) -> Array:
@@ -31,28 +32,14 @@ def window_levels(prices: Array, quantities: Array, window: int) -> Array:
 
     Reference: de Haan & Krsinich (2014); Diewert & Fox (2022), weighted by expenditure shares.
     """
-    length = min(window, len(prices))
-    rows = [
-        _one_window(prices[start : start + length], quantities[start : start + length], start)
-        for start in range(len(prices) - length + 1)
-    ]
-    return anchor(np.array(rows))
+    return fit_windows(prices, quantities, window, _fit)
 
 
-def _one_window(prices: Array, quantities: Array, start: int) -> Array:
-    sold = np.isfinite(prices)
-    priced = sold.any(axis=1)
-    levels = np.full(len(prices), np.nan)
-    columns = sold.any(axis=0)
-    sold, prices, quantities = sold[priced][:, columns], prices[priced][:, columns], quantities[priced][:, columns]
-    if sold.size == 0:
-        return levels
-    check_connected(sold, np.flatnonzero(priced) + start)
-    logs = np.log(np.where(sold, prices, 1.0))
-    value = np.where(sold, prices * quantities, 0.0)
+def _fit(prices: Array, quantities: Array, sold: NDArray[np.bool_]) -> Array:
+    logs = np.log(prices)
+    value = prices * quantities
     shares = value / value.sum(axis=1, keepdims=True)
     weight = shares.sum(axis=0)
     centred = (logs - (shares * logs).sum(axis=0) / weight) * sold
     normal = np.diag(shares.sum(axis=1)) - (shares / weight) @ shares.T
-    levels[priced] = np.linalg.solve(normal + 1.0 / len(normal), (shares * centred).sum(axis=1))
-    return levels
+    return np.linalg.solve(normal + 1.0 / len(normal), (shares * centred).sum(axis=1))

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -16,13 +18,41 @@ def anchor(levels: Array) -> Array:
     return anchored
 
 
-def check_connected(sold: NDArray[np.bool_], positions: NDArray[np.intp]) -> None:
-    """Raise UnconnectedPeriods, with the positions of each group, unless a chain of products joins all periods.
+def fit_windows(
+    prices: Array, quantities: Array, window: int, fit: Callable[[Array, Array, NDArray[np.bool_]], Array]
+) -> Array:
+    """(K, W) log levels of every window of W periods, each fitted on its own and anchored.
 
-    `sold` (n, N) tells which products are priced in each of n periods, `positions` (n,) what to call them.
+    `fit` is given the prices, quantities and sold flags of a window without its empty periods and
+    products, 0 where not sold except that prices are 1, and returns a log level per period. Periods
+    without any product are NaN.
+
+    Raises
+    ------
+    UnconnectedPeriods : the priced periods of a window share no chain of products.
     """
-    priced = sold.astype(np.float64)
-    groups = connected_groups(priced @ priced.T > 0)
+    length = min(window, len(prices))
+    sold = np.isfinite(prices)
+    levels = np.full((len(prices) - length + 1, length), np.nan)
+    for start in range(len(levels)):
+        here = sold[start : start + length]
+        priced, traded = np.flatnonzero(here.any(axis=1)), np.flatnonzero(here.any(axis=0))
+        if priced.size == 0:
+            continue
+        cut = np.ix_(start + priced, traded)
+        flags = sold[cut]
+        matched = flags.astype(np.float64)
+        check_connected(matched @ matched.T > 0, start + priced)
+        levels[start, priced] = fit(np.where(flags, prices[cut], 1.0), np.where(flags, quantities[cut], 0.0), flags)
+    return anchor(levels)
+
+
+def check_connected(linked: NDArray[np.bool_], positions: NDArray[np.intp]) -> None:
+    """Raise UnconnectedPeriods, with the positions of each group, unless links join all periods.
+
+    `linked` (n, n) tells which of n periods have a product in common, `positions` (n,) what to call them.
+    """
+    groups = connected_groups(linked)
     if len(groups) > 1:
         raise UnconnectedPeriods([positions[group].tolist() for group in groups])
 
