@@ -24,13 +24,17 @@ Bilateral: TypeAlias = Literal[
     "geometric-laspeyres",
     "geometric-paasche",
     "palgrave",
+    "sato-vartia",
 ]
+BaseWeighted: TypeAlias = Literal["lowe", "young", "geometric-young"]
 Geks: TypeAlias = Literal["geks-jevons", "geks-fisher", "geks-tornqvist", "geks-walsh"]
-Multilateral: TypeAlias = Geks | Literal["tpd", "geary-khamis"]
+Multilateral: TypeAlias = Geks | Literal["tpd", "tpd-unweighted", "geary-khamis", "similarity"]
 Method: TypeAlias = Bilateral | Multilateral
 Form: TypeAlias = Literal["chained", "direct"]
-Splice: TypeAlias = Literal["movement", "window", "half", "mean"]
+Splice: TypeAlias = Literal["movement", "window", "half", "mean", "link-month"]
+Window: TypeAlias = int | Literal["expanding"]
 Onto: TypeAlias = Literal["published", "recalculated"]
+Unconnected: TypeAlias = Literal["refuse", "blank"]
 WeightSource: TypeAlias = Literal["file", "turnover"]
 WeightFormula: TypeAlias = Literal["lowe", "young"]
 Gate: TypeAlias = Literal[
@@ -39,11 +43,20 @@ Gate: TypeAlias = Literal[
 
 BILATERAL_FORMULAS: tuple[Bilateral, ...] = get_args(Bilateral)
 GEKS_METHODS: tuple[Geks, ...] = get_args(Geks)
-MULTILATERAL_METHODS: tuple[Multilateral, ...] = (*GEKS_METHODS, "tpd", "geary-khamis")
-METHODS: tuple[Method, ...] = (*BILATERAL_FORMULAS, *MULTILATERAL_METHODS)
+BASE_WEIGHTED_FORMULAS: tuple[BaseWeighted, ...] = get_args(BaseWeighted)
+MULTILATERAL_METHODS: tuple[Multilateral, ...] = (
+    *GEKS_METHODS,
+    "tpd",
+    "tpd-unweighted",
+    "geary-khamis",
+    "similarity",
+)
+PLACE_METHODS: tuple[Multilateral, ...] = (*GEKS_METHODS, "tpd", "tpd-unweighted", "geary-khamis")
+METHODS: tuple[Method | BaseWeighted, ...] = (*BILATERAL_FORMULAS, *BASE_WEIGHTED_FORMULAS, *MULTILATERAL_METHODS)
 FORMS: tuple[Form, ...] = get_args(Form)
 SPLICES: tuple[Splice, ...] = get_args(Splice)
 ONTO: tuple[Onto, ...] = get_args(Onto)
+UNCONNECTED: tuple[Unconnected, ...] = get_args(Unconnected)
 
 # The order is that of precedence: a refused line carries the first rule it breaks.
 REFUSAL_RULES: tuple[str, ...] = (

@@ -7,7 +7,9 @@
     ├── DataError                   3   the data cannot be used
     │   ├── UnreadableDeliveries    3   files that cannot be read as what they claim to be
     │   ├── BadPanel                3   a panel that no index can be made of
-    │   └── UnconnectedPeriods      3   a window whose periods share no chain of products
+    │   ├── UnconnectedPeriods      3   a window whose periods share no chain of products
+    │   ├── NoLevel                 3   an index without a level in a period that is asked for
+    │   └── UnconnectedPlaces       3   places that share no chain of products
     ├── WorkspaceBusy               3   another compile holds the workspace
     ├── OrchestrationError          3   Prefect failed, not a step of the compile
     └── BrokenInvariant             3   a run-time check failed: a defect, never a result
@@ -111,12 +113,14 @@ class UnconnectedPeriods(DataError):
     """The priced periods of a window fall apart into groups that share no product.
 
     `groups` holds the periods of each group: positions when raised by a kernel, the
-    period labels once `labelled` has been applied.
+    period labels once `labelled` has been applied. `segment` is the position of the panel concerned
+    among those compiled together.
     """
 
-    def __init__(self, groups: Sequence[Sequence[object]], where: str = "") -> None:
+    def __init__(self, groups: Sequence[Sequence[object]], where: str = "", *, segment: int = 0) -> None:
         self.groups = tuple(tuple(group) for group in groups)
         self.where = where
+        self.segment = segment
         sides = " | ".join(_span(group) for group in self.groups)
         place = f" of {where}" if where else ""
         super().__init__(
@@ -128,7 +132,25 @@ class UnconnectedPeriods(DataError):
     def labelled(self, labels: Sequence[object], where: str) -> UnconnectedPeriods:
         """The same error with period labels instead of positions and the place named."""
         named = [[labels[int(str(position))] for position in group] for group in self.groups]
-        return UnconnectedPeriods(named, where)
+        return UnconnectedPeriods(named, where, segment=self.segment)
+
+
+class NoLevel(DataError):
+    """An index has no level in a period that is asked for."""
+
+
+class UnconnectedPlaces(DataError):
+    """Places to be compared fall apart into groups that share no product; `groups` holds their names."""
+
+    def __init__(self, groups: Sequence[Sequence[str]], where: str = "") -> None:
+        self.groups = tuple(tuple(group) for group in groups)
+        self.where = where
+        sides = " | ".join(_span(group) for group in self.groups)
+        place = f" for {where}" if where else ""
+        super().__init__(
+            f"No price levels can be compared{place}: the places fall into {len(self.groups)} groups with no product "
+            f"in common ({sides}). Widen the product definition, or compare the places of each group."
+        )
 
 
 class WorkspaceBusy(TillwrightError):

@@ -8,9 +8,9 @@ from numpy.typing import NDArray
 
 from tests.kernels import tolerances, twins
 from tests.kernels.panels import PROPERTY, floats, panels, powers_of_ten
-from tests.kernels.variants import GEKS_FORMULAS
+from tests.kernels.variants import GEKS_FORMULAS, rolling_geks
 from tillwright.errors import UnconnectedPeriods
-from tillwright.kernels import bilateral, geks
+from tillwright.kernels import bilateral
 
 Array = NDArray[np.float64]
 Sold = tuple[Array, Array]
@@ -31,7 +31,7 @@ def log_pairs(panel: Sold, formula: str) -> Array:
 
 def one_window(panel: Sold, formula: str) -> Array:
     """Log GEKS levels with all periods in one window."""
-    row: Array = geks.window_levels(log_pairs(panel, formula), len(panel[0]))[0]
+    row: Array = rolling_geks(log_pairs(panel, formula), len(panel[0]))[0]
     return row
 
 
@@ -87,7 +87,7 @@ def test_levels_do_not_depend_on_the_base_period(formula: str, panel: Sold, orde
 def test_chaining_inside_a_window_is_the_direct_comparison(formula: str, panel: Sold, start: int) -> None:
     # Every pair: P(s, t) computed with s as base equals P(0, t)/P(0, s) of the same window.
     logs = log_pairs(panel, formula)[start : start + 3, start : start + 3]
-    row = geks.window_levels(log_pairs(panel, formula), 3)[start]
+    row = rolling_geks(log_pairs(panel, formula), 3)[start]
     for s in range(3):
         by_definition = (logs[s][:, None] + logs).mean(axis=0)
         close(row - row[s], by_definition)
@@ -146,8 +146,8 @@ def test_incomplete_panels_over_twenty_four_decades(formula: str, panel: Sold) -
     groups = twins.unconnected_groups(pairs, 3)
     if groups:
         with pytest.raises(UnconnectedPeriods) as raised:
-            geks.window_levels(np.log(np.array(pairs)), 3)
+            rolling_geks(np.log(np.array(pairs)), 3)
         assert raised.value.groups == groups
     else:
-        found = geks.window_levels(np.log(np.array(pairs)), 3)
+        found = rolling_geks(np.log(np.array(pairs)), 3)
         close(found, np.array(twins.window_levels(pairs, 3)))

@@ -7,10 +7,10 @@ import pytest
 from numpy.typing import NDArray
 
 from tests.kernels import tolerances
-from tests.kernels.variants import FORMS, VARIANTS, Onto, Splice
+from tests.kernels.variants import FORMS, VARIANTS, Onto, Splice, rolling_geks
 from tillwright.choices import BILATERAL_FORMULAS
 from tillwright.errors import UnconnectedPeriods
-from tillwright.kernels import bilateral, geks, splicing
+from tillwright.kernels import bilateral, splicing
 
 Array = NDArray[np.float64]
 NAN = math.nan
@@ -99,21 +99,21 @@ def test_geks_rows_start_at_zero_in_the_first_priced_period() -> None:
         [NAN, 0.0, two, NAN],
         [0.0, two, NAN, 2 * two],
     ]
-    found = geks.window_levels(log_pairs, 4)
+    found = rolling_geks(log_pairs, 4)
     np.testing.assert_allclose(found, expected, rtol=0, atol=tolerances.EXACT)
 
 
 def test_geks_window_without_products_is_missing() -> None:
     log_pairs = np.full((4, 4), np.nan)
     log_pairs[3, 3] = 0.0
-    np.testing.assert_array_equal(geks.window_levels(log_pairs, 3), [[NAN, NAN, NAN], [NAN, NAN, 0.0]])
+    np.testing.assert_array_equal(rolling_geks(log_pairs, 3), [[NAN, NAN, NAN], [NAN, NAN, 0.0]])
 
 
 @pytest.mark.parametrize("window", [4, 5, 99])
 def test_geks_window_longer_than_the_panel_is_the_panel(window: int) -> None:
     prices = np.array([[1.0], [2.0], [4.0], [3.0]])
     log_pairs = np.log(bilateral.pair_levels(prices, ones_like(prices), "fisher"))
-    found = geks.window_levels(log_pairs, window)
+    found = rolling_geks(log_pairs, window)
     assert found.shape == (1, 4)
     np.testing.assert_allclose(np.exp(found[0]), [1, 2, 4, 3], rtol=tolerances.EXACT)
 
@@ -122,7 +122,7 @@ def test_unconnected_window_names_the_periods_on_each_side() -> None:
     prices = np.array([[1.0, NAN], [2.0, NAN], [NAN, NAN], [NAN, 1.0], [NAN, 2.0]])
     log_pairs = np.log(bilateral.pair_levels(prices, ones_like(prices), "jevons"))
     with pytest.raises(UnconnectedPeriods) as raised:
-        geks.window_levels(log_pairs, 5)
+        rolling_geks(log_pairs, 5)
     assert raised.value.groups == ((0, 1), (3, 4))
 
 
@@ -130,7 +130,7 @@ def test_interleaved_groups_are_told_apart() -> None:
     prices = np.array([[1.0, NAN, NAN], [NAN, 1.0, NAN], [2.0, NAN, NAN], [NAN, 2.0, 5.0]])
     log_pairs = np.log(bilateral.pair_levels(prices, ones_like(prices), "jevons"))
     with pytest.raises(UnconnectedPeriods) as raised:
-        geks.window_levels(log_pairs, 4)
+        rolling_geks(log_pairs, 4)
     assert raised.value.groups == ((0, 2), (1, 3))
 
 
@@ -138,7 +138,7 @@ def test_connection_through_a_third_period_is_enough() -> None:
     prices = np.array([[1.0, NAN], [NAN, 3.0], [2.0, 4.0]])
     log_pairs = np.log(bilateral.pair_levels(prices, ones_like(prices), "jevons"))
     expected = np.log([[1.0, 2 * 3 / 4, 2.0]])
-    found = geks.window_levels(log_pairs, 3)
+    found = rolling_geks(log_pairs, 3)
     np.testing.assert_allclose(found, expected, rtol=0, atol=tolerances.EXACT)
 
 

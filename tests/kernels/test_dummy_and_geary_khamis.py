@@ -14,6 +14,7 @@ from tests.reference.published import dataset
 from tillwright.errors import UnconnectedPeriods
 from tillwright.kernels import geary_khamis, time_product_dummy
 from tillwright.kernels.methods import Recipe, make_index
+from tillwright.kernels.windows import Windows
 
 Array = NDArray[np.float64]
 METHODS = (time_product_dummy.window_levels, geary_khamis.window_levels)
@@ -21,6 +22,11 @@ REGRESSION = 1e-9
 """What a regression on some dozen dummies may lose to rounding."""
 FIXED_POINT = 1e-13
 """Relative change at which the iteration of the definition is taken to have arrived."""
+
+
+def whole(prices: Array) -> Windows:
+    """One window over all periods."""
+    return Windows.rolling(len(prices), len(prices))
 
 
 def by_regression(prices: Array, quantities: Array) -> Array:
@@ -70,7 +76,7 @@ def connected() -> list[tuple[Array, Array]]:
 @pytest.mark.parametrize("number", range(len(connected())))
 def test_time_product_dummy_is_the_weighted_regression(number: int) -> None:
     prices, quantities = connected()[number]
-    (levels,) = time_product_dummy.window_levels(prices, quantities, len(prices))
+    ((levels,),) = time_product_dummy.window_levels(prices, quantities, whole(prices))
     with np.errstate(all="ignore"):
         expected = by_regression(prices, quantities)
     np.testing.assert_allclose(levels, expected, rtol=0, atol=REGRESSION)
@@ -79,7 +85,7 @@ def test_time_product_dummy_is_the_weighted_regression(number: int) -> None:
 @pytest.mark.parametrize("number", range(len(connected())))
 def test_geary_khamis_is_where_its_definition_arrives(number: int) -> None:
     prices, quantities = connected()[number]
-    (levels,) = geary_khamis.window_levels(prices, quantities, len(prices))
+    ((levels,),) = geary_khamis.window_levels(prices, quantities, whole(prices))
     np.testing.assert_allclose(levels, by_iteration(prices, quantities), rtol=0, atol=1e-9)
 
 
@@ -91,10 +97,10 @@ def test_two_periods_have_the_closed_forms_of_the_literature() -> None:
         prices, quantities = data.prices[[before, now]], data.quantities[[before, now]]
         shares = prices * quantities / (prices * quantities).sum(axis=1, keepdims=True)
         weight = shares[0] * shares[1] / (shares[0] + shares[1])
-        (dummy,) = time_product_dummy.window_levels(prices, quantities, 2)
+        ((dummy,),) = time_product_dummy.window_levels(prices, quantities, whole(prices))
         assert dummy[1] == pytest.approx((weight * np.log(prices[1] / prices[0])).sum() / weight.sum(), abs=1e-12)
         harmonic = quantities[0] * quantities[1] / (quantities[0] + quantities[1])
-        (khamis,) = geary_khamis.window_levels(prices, quantities, 2)
+        ((khamis,),) = geary_khamis.window_levels(prices, quantities, whole(prices))
         assert khamis[1] == pytest.approx(np.log((prices[1] @ harmonic) / (prices[0] @ harmonic)), abs=1e-12)
 
 
@@ -102,7 +108,7 @@ def test_two_periods_have_the_closed_forms_of_the_literature() -> None:
 def test_drift_example_ends_at_one(method: object) -> None:
     # Diewert (2021), Tables 1-2: period 4 repeats period 1, and a transitive index returns to 1.
     data = dataset("chaindrift")
-    (levels,) = method(data.prices, data.quantities, 4)  # type: ignore[operator]
+    ((levels,),) = method(data.prices, data.quantities, whole(data.prices))  # type: ignore[operator]
     assert abs(np.exp(levels[-1]) - 1) <= tolerances.EXACT
 
 
@@ -112,7 +118,7 @@ def test_drift_example_ends_at_one(method: object) -> None:
 def test_prices_that_move_together_give_their_movement(method: object, factor: float) -> None:
     data = dataset("artificial")
     prices = np.vstack([data.prices[0], data.prices[0] * factor, data.prices[0] * factor**2])
-    (levels,) = method(prices, data.quantities[:3], 3)  # type: ignore[operator]
+    ((levels,),) = method(prices, data.quantities[:3], whole(prices))  # type: ignore[operator]
     np.testing.assert_allclose(levels, np.log([1.0, factor, factor**2]), rtol=0, atol=1e-10)
 
 
@@ -122,8 +128,8 @@ def test_prices_that_move_together_give_their_movement(method: object, factor: f
 def test_units_of_measure_do_not_matter(method: object, unit: float) -> None:
     data = dataset("artificial")
     units = np.array([unit, 1.0, 1.0, 1.0, 1.0, 1.0])
-    (levels,) = method(data.prices, data.quantities, 5)  # type: ignore[operator]
-    (changed,) = method(data.prices * units, data.quantities / units, 5)  # type: ignore[operator]
+    ((levels,),) = method(data.prices, data.quantities, whole(data.prices))  # type: ignore[operator]
+    ((changed,),) = method(data.prices * units, data.quantities / units, whole(data.prices))  # type: ignore[operator]
     np.testing.assert_allclose(changed, levels, rtol=0, atol=1e-9)
 
 
@@ -131,7 +137,7 @@ def test_units_of_measure_do_not_matter(method: object, unit: float) -> None:
 def test_windows_without_a_common_product_are_refused_with_their_periods(method: object) -> None:
     prices = np.array([[1.0, np.nan], [1.1, np.nan], [np.nan, 2.0], [np.nan, 2.1]])
     with pytest.raises(UnconnectedPeriods) as caught:
-        method(prices, np.ones_like(prices), 4)  # type: ignore[operator]
+        method(prices, np.ones_like(prices), whole(prices))  # type: ignore[operator]
     assert caught.value.groups == ((0, 1), (2, 3))
 
 

@@ -10,10 +10,10 @@ from numpy.typing import NDArray
 
 from tests.kernels import tolerances, twins
 from tests.kernels.panels import Panel, random_panels
-from tests.kernels.variants import GEKS_FORMULAS, VARIANTS, Onto, Splice
+from tests.kernels.variants import GEKS_FORMULAS, VARIANTS, Onto, Splice, rolling_geks
 from tillwright.choices import BILATERAL_FORMULAS
 from tillwright.errors import UnconnectedPeriods
-from tillwright.kernels import bilateral, geks, splicing
+from tillwright.kernels import bilateral, splicing
 
 Array = NDArray[np.float64]
 PANELS = random_panels()
@@ -96,11 +96,11 @@ def test_geks_of_rolling_windows(panel: Panel, formula: str) -> None:
         groups = twins.unconnected_groups(pairs, window)
         if groups:
             with pytest.raises(UnconnectedPeriods) as raised:
-                geks.window_levels(log_pairs, window)
+                rolling_geks(log_pairs, window)
             assert raised.value.groups == groups
         else:
             expected = np.array(twins.window_levels(pairs, window))
-            same_logs(geks.window_levels(log_pairs, window), expected)
+            same_logs(rolling_geks(log_pairs, window), expected)
 
 
 @each_reversible
@@ -108,7 +108,7 @@ def test_geks_of_rolling_windows(panel: Panel, formula: str) -> None:
 def test_geks_needs_only_pairs_inside_the_window(panel: Panel, formula: str) -> None:
     expected = np.array(twins.window_levels(twin_pairs(panel, formula), SPAN_WINDOW))
     pairs = bilateral.pair_levels(panel.prices, panel.quantities, formula, span=SPAN_WINDOW - 1)
-    same_logs(geks.window_levels(np.log(pairs), SPAN_WINDOW), expected)
+    same_logs(rolling_geks(np.log(pairs), SPAN_WINDOW), expected)
 
 
 @pytest.mark.parametrize(("splice", "onto"), VARIANTS)
@@ -120,7 +120,7 @@ def test_splicing_of_rolling_geks(panel: Panel, splice: Splice, onto: Onto) -> N
         expected = np.array(twins.splice_levels(levels, splice, onto))
         same_levels(splicing.splice(np.array(levels), splice=splice, onto=onto), expected)
         found_pairs = bilateral.pair_levels(panel.prices, panel.quantities, "tornqvist")
-        found_levels = geks.window_levels(np.log(found_pairs), window)
+        found_levels = rolling_geks(np.log(found_pairs), window)
         same_levels(splicing.splice(found_levels, splice=splice, onto=onto), expected)
 
 

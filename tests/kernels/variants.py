@@ -3,7 +3,12 @@
 import itertools
 from typing import Literal
 
+import numpy as np
+from numpy.typing import NDArray
+
 from tillwright.choices import BILATERAL_FORMULAS
+from tillwright.kernels import geks
+from tillwright.kernels.windows import Windows
 
 Splice = Literal["movement", "window", "half", "mean"]
 Onto = Literal["recalculated", "published"]
@@ -28,3 +33,8 @@ def all_but(*names: str) -> list[str]:
 # GEKS needs time reversal: only then is the log matrix of pairs antisymmetric, and the geometric
 # mean over all links the least-squares fit.
 GEKS_FORMULAS = on_offer("jevons", "dutot", "fisher", "tornqvist", "walsh")
+
+
+def rolling_geks(log_pairs: NDArray[np.float64], window: int) -> NDArray[np.float64]:
+    """(K, W) log GEKS levels of every window of that many periods."""
+    return geks.window_levels(log_pairs, Windows.rolling(len(log_pairs), window))

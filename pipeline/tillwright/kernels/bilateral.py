@@ -2,13 +2,25 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from functools import cache
 from typing import Literal
 
 import numpy as np
 
-from tillwright.kernels.pairs import Array, Pair, PairSum, sum_all_pairs, sum_listed_pairs
+from tillwright.kernels import sato_vartia
+from tillwright.kernels.network import Flags
+from tillwright.kernels.pairs import (
+    Array,
+    Pair,
+    PairSum,
+    Positions,
+    make_fields,
+    sum_all_pairs,
+    sum_listed_pairs,
+    sum_others,
+    sum_segments,
+)
 
 
 def jevons(pair_sum: PairSum) -> Array:
@@ -127,6 +139,31 @@ def palgrave(pair_sum: PairSum) -> Array:
     return _log(pair_sum("1/e", "xe") / pair_sum("m", "x"))
 
 
+def lowe(pair_sum: PairSum) -> Array:
+    """Log of Σ p_t q_b / Σ p_s q_b over matched products, q_b the quantities of a period of their own.
+
+    Reference: ILO et al. (2004), Consumer Price Index Manual, ch. 15.
+    """
+    return _log(pair_sum("m", "wp") / pair_sum("wp", "m"))
+
+
+def young(pair_sum: PairSum) -> Array:
+    """Log of Σ s_b·(p_t/p_s), s_b the shares in the turnover of a period of their own over matched products.
+
+    Reference: ILO et al. (2004), Consumer Price Index Manual, ch. 15.
+    """
+    return _log(pair_sum("w/e", "e") / pair_sum("w", "m"))
+
+
+def geometric_young(pair_sum: PairSum) -> Array:
+    """Log of Π (p_t/p_s)^s_b, s_b as in `young`.
+
+    Reference: ILO et al. (2020), Consumer Price Index Manual, ch. 8.
+    """
+    mean: Array = (pair_sum("w", "l") - pair_sum("wl", "m")) / pair_sum("w", "m")
+    return mean
+
+
 def _log(ratio: Array) -> Array:
     logs: Array = np.log(ratio)
     return logs
@@ -147,8 +184,14 @@ FORMULAS: dict[str, Callable[[PairSum], Array]] = {
     "geometric-laspeyres": geometric_laspeyres,
     "geometric-paasche": geometric_paasche,
     "palgrave": palgrave,
+    "lowe": lowe,
+    "young": young,
+    "geometric-young": geometric_young,
 }
 PRICES_ONLY = frozenset({"jevons", "dutot", "carli", "harmonic", "cswd"})
+BASE_WEIGHTED = frozenset({"lowe", "young", "geometric-young"})
+SATO_VARTIA = "sato-vartia"
+BILATERAL = (*FORMULAS, SATO_VARTIA)
 
 
 def log_pair_levels(prices: Array, quantities: Array | None, formula: str, *, span: int | None = None) -> Array:
@@ -157,8 +200,8 @@ def log_pair_levels(prices: Array, quantities: Array | None, formula: str, *, sp
     Parameters
     ----------
     prices, quantities : (T, N) arrays; NaN = not sold. Quantities may be None for formulas in
-        `PRICES_ONLY`.
-    formula : a key of `FORMULAS`.
+        `PRICES_ONLY`. A product with a price and a quantity of 0 counts where it needs no weight.
+    formula : one of `BILATERAL`, but for those in `BASE_WEIGHTED`.
     span : the largest distance in periods between the two sides; None = every pair.
 
     Returns
@@ -166,14 +209,12 @@ def log_pair_levels(prices: Array, quantities: Array | None, formula: str, *, sp
     NaN where no product is priced in both periods, or beyond `span`; 0 on the diagonal of every
     priced period.
     """
-    pair_sum = sum_all_pairs(prices, quantities, wanted_pairs(formula), span)
-    levels, matched = _where_matched(formula, pair_sum)
-    if span is not None:
-        distance = np.abs(np.subtract.outer(np.arange(len(prices)), np.arange(len(prices))))
-        levels[distance > span] = np.nan
-    diagonal = np.arange(len(prices))
-    levels[diagonal, diagonal] = np.where(matched.diagonal(), 0.0, np.nan)
-    return levels
+    if formula == SATO_VARTIA:
+        assert quantities is not None
+        base, current = np.divmod(np.arange(len(prices) ** 2), max(len(prices), 1))
+        logs = sato_vartia.log_levels(prices, quantities, base, current).reshape(len(prices), len(prices))
+        return _within(logs, span)
+    return logs_of_pairs(formula, sum_all_pairs(prices, quantities, wanted_pairs(formula), span), span)
 
 
 def pair_levels(prices: Array, quantities: Array | None, formula: str, *, span: int | None = None) -> Array:
@@ -185,17 +226,36 @@ def pair_levels(prices: Array, quantities: Array | None, formula: str, *, span: 
     return levels
 
 
+def logs_of_pairs(formula: str, pair_sum: PairSum, span: int | None = None) -> Array:
+    """(…, T, T) log levels of all pairs from their sums, of the fields in `wanted_pairs`.
+
+    As `log_pair_levels` returns them.
+    """
+    levels = _logs(formula, pair_sum)
+    priced = pair_sum(*wanted_pairs(formula)[0]).diagonal(axis1=-2, axis2=-1) > 0
+    diagonal = np.arange(levels.shape[-1])
+    levels[..., diagonal, diagonal] = np.where(priced, 0.0, np.nan)
+    return _within(levels, span)
+
+
 def series(
-    prices: Array, quantities: Array | None, formula: str, *, form: Literal["chained", "direct"] = "chained"
+    prices: Array,
+    quantities: Array | None,
+    formula: str,
+    *,
+    form: Literal["chained", "direct"] = "chained",
+    weights: Array | None = None,
 ) -> Array:
     """(T,) index of one formula, the first priced period = 1.
 
     Parameters
     ----------
     prices, quantities : (T, N) arrays; NaN = not sold.
-    formula : a key of `FORMULAS`.
+    formula : one of `BILATERAL`.
     form : "direct" compares every period with the first priced one; "chained" multiplies the
         links between consecutive priced periods.
+    weights : (N,) for formulas in `BASE_WEIGHTED`: quantities for "lowe", turnover for the others, of the
+        period that gives the weights; products without any are left out.
 
     Returns
     -------
@@ -203,23 +263,55 @@ def series(
     the period shares no product with the first; in a chained index from the first link without a
     common product onwards.
     """
-    result = np.full(len(prices), np.nan)
-    priced = np.flatnonzero(np.isfinite(prices).any(axis=1))
-    if priced.size == 0:
-        return result
-    base = priced[:-1] if form == "chained" else np.full(priced.size - 1, priced[0])
-    pair_sum = sum_listed_pairs(prices, quantities, wanted_pairs(formula), base, priced[1:])
-    logs, _ = _where_matched(formula, pair_sum)
-    if form == "chained":
-        logs = np.cumsum(logs)
-    result[priced[0]] = 1.0
-    result[priced[1:]] = np.exp(logs)
+    segments = np.zeros(1, dtype=np.intp)
+    result: Array = series_of_segments(prices, quantities, [formula], segments, form=form, weights=weights)[0, 0]
     return result
+
+
+def series_of_segments(
+    prices: Array,
+    quantities: Array | None,
+    formulas: Sequence[str],
+    segments: Positions,
+    *,
+    form: Literal["chained", "direct"],
+    weights: Array | None = None,
+    leave_out: bool = False,
+) -> Array:
+    """(F, B, T) indexes of F formulas and B segments of columns, sharing their sums over products.
+
+    The formulas must ask for the same kind of weight: all of `PRICES_ONLY`, all of `BASE_WEIGHTED` with the
+    same `weights`, or all others but "sato-vartia", which comes alone. Arguments as for `series` and
+    `kernels.pairs.sum_all_pairs`.
+    """
+    present = _present(prices, quantities, formulas[0], weights, segments)
+    if leave_out:
+        present = sum_others(present)
+    priced = present > 0
+    base = _compared_with(priced, form)
+    segment, current = np.nonzero(base >= 0)
+    codes, at = np.unique(base[segment, current] * priced.shape[1] + current, return_inverse=True)
+    pairs = np.divmod(codes, priced.shape[1])
+    if formulas[0] == SATO_VARTIA:
+        logs = [_sato_vartia(prices, quantities, pairs, segments, leave_out=leave_out)]
+    else:
+        wanted = [pair for formula in formulas for pair in wanted_pairs(formula)]
+        pair_sum = sum_listed_pairs(
+            prices, quantities, wanted, *pairs, weights=weights, segments=segments, leave_out=leave_out
+        )
+        logs = [_logs(formula, pair_sum) for formula in formulas]
+    result = np.zeros((len(formulas), *priced.shape))
+    for position, links in enumerate(logs):
+        result[position, segment, current] = links[segment, at]
+    if form == "chained":
+        np.cumsum(result, axis=-1, out=result)
+    levels: Array = np.exp(np.where(priced, result, np.nan))
+    return levels
 
 
 @cache
 def wanted_pairs(formula: str) -> tuple[Pair, ...]:
-    """Sums that a formula asks for, found by letting it ask; the first tells which pairs have a match."""
+    """Sums that a formula asks for, found by letting it ask; the diagonal of the first tells what was sold."""
     asked: list[Pair] = []
 
     def note(base: str, current: str) -> Array:
@@ -227,13 +319,56 @@ def wanted_pairs(formula: str) -> tuple[Pair, ...]:
         return np.ones(1)
 
     FORMULAS[formula](note)
-    match = ("x", "m") if ("x", "m") in asked else ("m", "m")
-    return (match, *asked)
+    sold = ("m", "m") if formula in PRICES_ONLY | BASE_WEIGHTED else ("x", "m")
+    return (sold, *asked)
 
 
-def _where_matched(formula: str, pair_sum: PairSum) -> tuple[Array, np.ndarray]:
-    """Log levels, NaN where no product is in common, and whether one is."""
-    matched = pair_sum(*wanted_pairs(formula)[0]) > 0
+def _present(
+    prices: Array, quantities: Array | None, formula: str, weights: Array | None, segments: Positions
+) -> Array:
+    """(B, T) above 0 where a segment has something to compare."""
+    field = make_fields(prices, quantities, weights)
+    return sum_segments(field("m" if formula in PRICES_ONLY | BASE_WEIGHTED else "x"), segments)
+
+
+def _compared_with(priced: Flags, form: str) -> Positions:
+    """(B, T) the priced period that each is compared with, −1 = none."""
+    periods = np.arange(priced.shape[1])
+    if form == "direct":
+        base = np.broadcast_to(priced.argmax(axis=1)[:, None], priced.shape)
+    else:
+        last = np.maximum.accumulate(np.where(priced, periods, -1), axis=1)
+        base = np.concatenate([np.full((len(priced), 1), -1), last[:, :-1]], axis=1)
+    return np.where(priced & (base < periods), base, -1)
+
+
+def _sato_vartia(
+    prices: Array,
+    quantities: Array | None,
+    pairs: tuple[Positions, Positions],
+    segments: Positions,
+    *,
+    leave_out: bool,
+) -> Array:
+    assert quantities is not None
+    if not leave_out:
+        return sato_vartia.log_levels(prices, quantities, *pairs, segments)
+    of_column = np.repeat(np.arange(len(segments)), np.diff(np.append(segments, prices.shape[1])))
+    kept = [of_column != segment for segment in range(len(segments))]
+    return np.concatenate([sato_vartia.log_levels(prices[:, use], quantities[:, use], *pairs) for use in kept])
+
+
+def _logs(formula: str, pair_sum: PairSum) -> Array:
+    """Log levels; NaN where no product is in common, since every formula is 0/0 there."""
     with np.errstate(divide="ignore", invalid="ignore"):
         levels = FORMULAS[formula](pair_sum)
-    return np.where(matched, levels, np.nan), matched
+    return np.where(np.isfinite(levels), levels, np.nan)
+
+
+def _within(levels: Array, span: int | None) -> Array:
+    """The same levels, NaN for pairs further than `span` periods apart."""
+    if span is None:
+        return levels
+    periods = np.arange(levels.shape[-1])
+    near = np.abs(np.subtract.outer(periods, periods)) <= span
+    return np.where(near, levels, np.nan)

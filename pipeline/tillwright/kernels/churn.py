@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from tillwright.kernels.pairs import Array
+from tillwright.kernels.pairs import Array, Positions
 
 Counts = NDArray[np.int64]
 
@@ -41,6 +41,23 @@ def count_matched(prices: Array) -> Counts:
     matched = np.zeros(len(prices), dtype=np.int64)
     matched[1:] = (sold[1:] & sold[:-1]).sum(axis=1)
     return matched
+
+
+@dataclass(frozen=True, slots=True)
+class SegmentCounts:
+    """(B, T) products, and those matched with the period before, of each segment of columns."""
+
+    products: Counts
+    matched: Counts
+
+
+def count_by_segment(prices: Array, segments: Positions) -> SegmentCounts:
+    """Products and matched products of each segment of the (T, N) array; see `kernels.pairs`."""
+    sold = np.isfinite(prices)
+    both = np.zeros_like(sold)
+    np.logical_and(sold[1:], sold[:-1], out=both[1:])
+    products, matched = (np.add.reduceat(flags, segments, axis=1, dtype=np.int64).T for flags in (sold, both))
+    return SegmentCounts(products, matched)
 
 
 def measure_churn(prices: Array, turnover: Array) -> Churn:

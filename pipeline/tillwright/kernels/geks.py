@@ -5,12 +5,14 @@ from __future__ import annotations
 import numpy as np
 from numpy.lib.stride_tricks import sliding_window_view
 
+from tillwright.errors import UnconnectedPeriods
+from tillwright.kernels.network import fit_levels
 from tillwright.kernels.pairs import Array
-from tillwright.kernels.windows import anchor, check_connected
+from tillwright.kernels.windows import Windows, anchor, settle
 
 
-def window_levels(log_pairs: Array, window: int) -> Array:
-    """(K, W) log GEKS levels of every window of W consecutive periods.
+def window_levels(log_pairs: Array, windows: Windows, *, apart: list[UnconnectedPeriods] | None = None) -> Array:
+    """(…, K, W) log GEKS levels of every window.
 
     The levels π minimise Σ_{s,t} (ln P[s,t] − (π_t − π_s))² over the pairs that exist.  Where every
     pair exists this is the geometric mean over all l of P(0,l)·P(l,t), the bilateral of a period
@@ -18,14 +20,14 @@ def window_levels(log_pairs: Array, window: int) -> Array:
 
     Parameters
     ----------
-    log_pairs : (T, T) log bilateral levels that satisfy time reversal, NaN where no product is in
-        common; only pairs less than `window` apart are read.
-    window : periods in a window; more than T means one window over all T.
+    log_pairs : (T, T) or (B, T, T) log bilateral levels that satisfy time reversal, NaN where no
+        product is in common; only pairs within a window are read.
+    windows : see `kernels.windows`.
+    apart : as in `kernels.windows.fit_windows`.
 
     Returns
     -------
-    Row k covers periods k … k+W−1 and is 0 at its first priced period; NaN in periods without any
-    product.
+    Row k is 0 at its first priced period; NaN in periods without any product.
 
     Raises
     ------
@@ -34,26 +36,26 @@ def window_levels(log_pairs: Array, window: int) -> Array:
     Reference: Gini (1931); Eltetö & Köves (1964); Szulc (1964); Ivancic, Diewert & Fox (2011);
     on Törnqvist, Caves, Christensen & Diewert (1982).
     """
-    length = min(window, len(log_pairs))
-    blocks = sliding_window_view(log_pairs, (length, length))
-    windows = np.diagonal(blocks, axis1=0, axis2=1).transpose(2, 0, 1)
-    levels = windows.mean(axis=1)
-    for position in np.flatnonzero(~np.isfinite(levels).all(axis=1)):
-        levels[position] = _fit_incomplete(windows[position], int(position))
-    return anchor(levels)
+    pairs = _pad(log_pairs.reshape(-1, *log_pairs.shape[-2:]), windows.before)
+    length = windows.length
+    blocks = sliding_window_view(pairs, (length, length), axis=(1, 2))
+    matrices = np.diagonal(blocks, axis1=1, axis2=2).transpose(0, 3, 1, 2)
+    covered = windows.covered()
+    levels = matrices.mean(axis=-2)
+    incomplete = ~np.isfinite(levels).all(axis=(0, 2)) | ~covered.all(axis=1)
+    for row in np.flatnonzero(incomplete):
+        levels[:, row] = _fit_incomplete(matrices[:, row], covered[row], int(row) - windows.before, apart)
+    return anchor(levels).reshape(*log_pairs.shape[:-2], *levels.shape[1:])
 
 
-def _fit_incomplete(pairs: Array, start: int) -> Array:
-    """(W,) least-squares log levels over the pairs that exist, mean 0."""
-    present = np.isfinite(pairs)
-    priced = np.flatnonzero(present.diagonal())
-    levels = np.full(len(pairs), np.nan)
-    if priced.size == 0:
-        return levels
-    linked = present[np.ix_(priced, priced)]
-    check_connected(linked, start + priced)
-    weights = linked.astype(np.float64)
-    laplacian = np.diag(weights.sum(axis=1)) - weights
-    observed = np.where(linked, pairs[np.ix_(priced, priced)], 0.0).sum(axis=0)
-    levels[priced] = np.linalg.solve(laplacian + 1.0 / priced.size, observed)
-    return levels
+def _fit_incomplete(pairs: Array, covered: np.ndarray, start: int, apart: list[UnconnectedPeriods] | None) -> Array:
+    """(B, W) least-squares log levels of one window over the pairs that exist within it."""
+    present = np.isfinite(pairs.diagonal(axis1=1, axis2=2)) & covered
+    linked = np.isfinite(pairs) & covered & covered[:, None]
+    settle(linked, present, start, apart)
+    levels = fit_levels(linked.astype(np.float64), np.where(linked, pairs, 0.0))
+    return np.where(present, levels, np.nan)
+
+
+def _pad(pairs: Array, before: int) -> Array:
+    return np.pad(pairs, ((0, 0), (before, 0), (before, 0)), constant_values=np.nan) if before else pairs

@@ -3,43 +3,73 @@
 from __future__ import annotations
 
 import numpy as np
-from numpy.typing import NDArray
 
-from tillwright.kernels.pairs import Array
-from tillwright.kernels.windows import fit_windows
+from tillwright.errors import UnconnectedPeriods
+from tillwright.kernels.network import fit_levels
+from tillwright.kernels.pairs import Array, Positions, make_fields, sum_segments
+from tillwright.kernels.windows import Windows, fit_windows
 
 
-def window_levels(prices: Array, quantities: Array, window: int) -> Array:
-    """(K, W) log levels of the weighted time product dummy index of every window of W periods.
+def window_levels(
+    prices: Array,
+    quantities: Array | None,
+    windows: Windows,
+    *,
+    segments: Positions | None = None,
+    leave_out: bool = False,
+    apart: list[UnconnectedPeriods] | None = None,
+) -> Array:
+    """(B, K, W) log levels of the time product dummy index of every window and segment.
 
-    Weighted least squares of ln p[t,i] = π_t + γ_i, weights the expenditure shares s[t,i] within each
-    period.  With γ taken out, π solves (diag(1) − S·D⁻¹·Sᵀ) π = Σ_i s·(ln p − mean_i), where D_i = Σ_t s[t,i]
-    and mean_i the share-weighted mean log price of the product: one matrix product per window.
+    Least squares of ln p[t,i] = π_t + γ_i, weighted by w: the expenditure shares s[t,i] within each
+    period, or 1 without quantities.  With γ taken out, π is the least-squares fit to the log
+    relatives of pairs of periods, each pair weighing Σ_i w[s,i]·w[t,i] / Σ_z w[z,i]: two matrix
+    products per window, solved by `kernels.network.fit_levels`.
 
     Parameters
     ----------
-    prices, quantities : (T, N) arrays, currency per unit and units; NaN = not sold.
-    window : periods in a window; more than T means one window over all T.
+    prices, quantities : (T, N) arrays, currency per unit and units; NaN = not sold. A quantity of 0
+        weighs nothing. None = unweighted.
+    windows : see `kernels.windows`.
+    segments, leave_out : as in `kernels.pairs.sum_all_pairs`. What is left when a segment is left out
+        keeps its weights, shares in the turnover of all.
+    apart : as in `kernels.windows.fit_windows`.
 
     Returns
     -------
-    Row k covers periods k … k+W−1 and is 0 at its first priced period; NaN in periods without any
-    product.
+    Row k is 0 at its first priced period; NaN in periods without any product.
 
     Raises
     ------
     UnconnectedPeriods : the priced periods of a window share no chain of products.
 
-    Reference: de Haan & Krsinich (2014); Diewert & Fox (2022), weighted by expenditure shares.
+    Reference: de Haan & Krsinich (2014); Diewert & Fox (2022), weighted by expenditure shares;
+    unweighted, Summers (1973). Deleting observations with their weights as they are is the cluster
+    jackknife of weighted least squares (MacKinnon, Nielsen & Webb 2023).
     """
-    return fit_windows(prices, quantities, window, _fit)
+    weights = dummy_weights(prices, quantities, segments, together=leave_out)
+    logs = make_fields(prices, quantities)("l")
+    return fit_windows(
+        weights, (weights, weights * logs), windows, _solve, segments=segments, leave_out=leave_out, apart=apart
+    )
 
 
-def _fit(prices: Array, quantities: Array, sold: NDArray[np.bool_]) -> Array:
-    logs = np.log(prices)
-    value = prices * quantities
-    shares = value / value.sum(axis=1, keepdims=True)
-    weight = shares.sum(axis=0)
-    centred = (logs - (shares * logs).sum(axis=0) / weight) * sold
-    normal = np.diag(shares.sum(axis=1)) - (shares / weight) @ shares.T
-    return np.linalg.solve(normal + 1.0 / len(normal), (shares * centred).sum(axis=1))
+def dummy_weights(
+    prices: Array, quantities: Array | None, segments: Positions | None = None, *, together: bool = False
+) -> Array:
+    """(T, N) weights of the regression, 0 = not sold: shares in the turnover of the segment, or of all `together`."""
+    field = make_fields(prices, quantities)
+    if quantities is None:
+        return field("m")
+    turnover = field("x")
+    if segments is None or together:
+        totals = turnover.sum(axis=1, keepdims=True)
+    else:
+        sizes = np.diff(np.append(segments, turnover.shape[1]))
+        totals = np.repeat(sum_segments(turnover, segments).T, sizes, axis=1)
+    shares: Array = turnover / np.where(totals > 0, totals, 1.0)
+    return shares
+
+
+def _solve(weights: Array, moments: Array) -> Array:
+    return fit_levels(weights, moments - moments.swapaxes(-1, -2))

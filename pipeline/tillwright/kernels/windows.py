@@ -1,66 +1,147 @@
-"""What multilateral methods have in common: windows anchored on their first period, and connected."""
+"""Windows of periods: which periods each covers, and fitting all of them from sums over products."""
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
 
 import numpy as np
+from numpy.lib.stride_tricks import sliding_window_view
 from numpy.typing import NDArray
 
 from tillwright.errors import UnconnectedPeriods
-from tillwright.kernels.pairs import Array
+from tillwright.kernels.network import Flags, find_groups
+from tillwright.kernels.pairs import Array, Positions, sum_others, sum_segments
+
+# Matrices of all windows and segments together are held below this many numbers (32 MB) at a time.
+HELD = 1 << 22
+
+
+@dataclass(frozen=True, slots=True)
+class Windows:
+    """K windows as rows of `length` consecutive periods; row k ends in period k + length − 1 − `before`.
+
+    `before` periods are put before the first, and are empty. Of row k the first `skipped[k]` periods
+    do not belong to the window.
+    """
+
+    length: int
+    before: int
+    skipped: NDArray[np.intp]
+
+    @classmethod
+    def rolling(cls, periods: int, length: int) -> Windows:
+        """Every window of `length` periods, or one over all if there are fewer."""
+        length = min(length, periods)
+        return cls(length, 0, np.zeros(periods - length + 1, dtype=np.intp))
+
+    @classmethod
+    def expanding(cls, links: Positions) -> Windows:
+        """For each of T periods the window from its link period, `links` (T,), to itself."""
+        reach = np.arange(len(links)) - links
+        length = int(reach.max(initial=0)) + 1
+        return cls(length, length - 1, length - 1 - reach)
+
+    def covered(self) -> Flags:
+        """(K, W) whether a period of a row belongs to its window."""
+        flags: Flags = np.arange(self.length) >= self.skipped[:, None]
+        return flags
+
+    def pad(self, values: Array, fill: float) -> Array:
+        """A (T, …) array with the empty periods put before it."""
+        if self.before == 0:
+            return values
+        return np.concatenate([np.full((self.before, *values.shape[1:]), fill), values])
 
 
 def anchor(levels: Array) -> Array:
-    """(K, W) log levels with 0 in the first period of each row that has one."""
-    first = np.isfinite(levels).argmax(axis=1)
-    anchored: Array = levels - levels[np.arange(len(levels)), first][:, None]
+    """(…, W) log levels with 0 in the first period of each row that has one."""
+    first = np.isfinite(levels).argmax(axis=-1)
+    anchored: Array = levels - np.take_along_axis(levels, first[..., None], axis=-1)
     return anchored
 
 
 def fit_windows(
-    prices: Array, quantities: Array, window: int, fit: Callable[[Array, Array, NDArray[np.bool_]], Array]
+    left: Array,
+    rights: Sequence[Array],
+    windows: Windows,
+    solve: Callable[..., Array],
+    *,
+    segments: Positions | None = None,
+    leave_out: bool = False,
+    apart: list[UnconnectedPeriods] | None = None,
 ) -> Array:
-    """(K, W) log levels of every window of W periods, each fitted on its own and anchored.
+    """(B, K, W) anchored log levels of every window and segment, from matrices that are sums over products.
 
-    `fit` is given the prices, quantities and sold flags of a window without its empty periods and
-    products, 0 where not sold except that prices are 1, and returns a log level per period. Periods
-    without any product are NaN.
+    For each right field r the matrix of a window is Σ_i left[s,i]·r[t,i] / Σ_z left[z,i], the last
+    sum over the window. Products sold once in a window link nothing and are passed over.
+
+    Parameters
+    ----------
+    left, rights : (T, N) arrays, 0 = not sold.
+    solve : takes the (…, W, W) matrices of all rights and returns (…, W) log levels.
+    segments, leave_out : as in `kernels.pairs.sum_all_pairs`.
+    apart : collects windows that fall apart, whose levels are NaN then; None = raise.
 
     Raises
     ------
     UnconnectedPeriods : the priced periods of a window share no chain of products.
     """
-    length = min(window, len(prices))
-    sold = np.isfinite(prices)
-    levels = np.full((len(prices) - length + 1, length), np.nan)
-    for start in range(len(levels)):
-        here = sold[start : start + length]
-        priced, traded = np.flatnonzero(here.any(axis=1)), np.flatnonzero(here.any(axis=0))
-        if priced.size == 0:
-            continue
-        cut = np.ix_(start + priced, traded)
-        flags = sold[cut]
-        matched = flags.astype(np.float64)
-        check_connected(matched @ matched.T > 0, start + priced)
-        levels[start, priced] = fit(np.where(flags, prices[cut], 1.0), np.where(flags, quantities[cut], 0.0), flags)
+    starts = np.zeros(1, dtype=np.intp) if segments is None else segments
+    left, rights = windows.pad(left, 0.0), [windows.pad(right, 0.0) for right in rights]
+    length, count = windows.length, len(windows.skipped)
+    sold = left > 0
+    present = sum_segments(sold.astype(np.float64), starts)
+    if leave_out:
+        present = sum_others(present)
+    levels = np.full((len(starts), count, length), np.nan)
+    held = max(HELD // (len(starts) * length * length * len(rights)), 1)
+    for low in range(0, count, held):
+        rows = range(low, min(low + held, count))
+        matrices = [np.zeros((len(starts), len(rows), length, length)) for _ in rights]
+        for at, row in enumerate(rows):
+            _fill([matrix[:, at] for matrix in matrices], left, rights, sold, row, windows, starts)
+        if leave_out:
+            matrices = [sum_others(matrix) for matrix in matrices]
+        here = sliding_window_view(present > 0, length, axis=1)[:, rows.start : rows.stop] & windows.covered()[rows]
+        for at, row in enumerate(rows):
+            settle(matrices[0][:, at] > 0, here[:, at], row - windows.before, apart)
+        levels[:, rows] = np.where(here, solve(*matrices), np.nan)
     return anchor(levels)
 
 
-def check_connected(linked: NDArray[np.bool_], positions: NDArray[np.intp]) -> None:
-    """Raise UnconnectedPeriods, with the positions of each group, unless links join all periods.
+def _fill(
+    into: list[Array],
+    left: Array,
+    rights: Sequence[Array],
+    sold: Flags,
+    row: int,
+    windows: Windows,
+    starts: Positions,
+) -> None:
+    """The matrices of one window, (B, W, W) each, of all segments."""
+    skip = int(windows.skipped[row])
+    periods = slice(row + skip, row + windows.length)
+    traded = np.flatnonzero(sold[periods].sum(axis=0, dtype=np.int32) > 1)
+    share = left[periods].take(traded, axis=1)
+    share /= share.sum(axis=0)
+    bounds = np.append(np.searchsorted(traded, starts), len(traded))
+    for matrix, right in zip(into, rights, strict=True):
+        field = right[periods].take(traded, axis=1)
+        for position in np.flatnonzero(np.diff(bounds)):
+            cut = slice(bounds[position], bounds[position + 1])
+            matrix[position, skip:, skip:] = share[:, cut] @ field[:, cut].T
 
-    `linked` (n, n) tells which of n periods have a product in common, `positions` (n,) what to call them.
+
+def settle(linked: Flags, present: Flags, start: int, apart: list[UnconnectedPeriods] | None) -> None:
+    """Raise UnconnectedPeriods for the first of B windows that falls apart, or note all in `apart`.
+
+    `linked` (B, W, W) tells which periods have a product in common, `present` (B, W) which have any; the
+    windows begin in period `start`.
     """
-    groups = connected_groups(linked)
-    if len(groups) > 1:
-        raise UnconnectedPeriods([positions[group].tolist() for group in groups])
-
-
-def connected_groups(linked: NDArray[np.bool_]) -> list[NDArray[np.intp]]:
-    """Positions of each connected group of a symmetric (n, n) adjacency, in order of first member."""
-    reach = linked | np.eye(len(linked), dtype=bool)
-    for _ in range(max(int(np.ceil(np.log2(len(linked)))), 1)):
-        reach = (reach.astype(np.float64) @ reach.astype(np.float64)) > 0
-    leaders = reach.argmax(axis=1)
-    return [np.flatnonzero(leaders == leader) for leader in np.unique(leaders)]
+    for segment, groups in enumerate(find_groups(linked, present)):
+        if groups:
+            problem = UnconnectedPeriods([[start + member for member in group] for group in groups], segment=segment)
+            if apart is None:
+                raise problem
+            apart.append(problem)
