@@ -54,7 +54,7 @@ def test_every_priced_row_stands_in_its_cell_and_nothing_else_does(seed: int) ->
 def test_arrays_do_not_depend_on_the_order_of_rows() -> None:
     frame = random_frame(1)
     one, other = arrays(frame), arrays(frame.reverse())
-    np.testing.assert_array_equal(one.flat_prices, other.flat_prices)
+    np.testing.assert_array_equal(one.prices, other.prices)
     assert one.keys.equals(other.keys)
 
 
@@ -78,6 +78,12 @@ def test_the_same_product_in_two_groups_is_two_columns() -> None:
     assert [block.prices.tolist() for block in arrays(frame, value=None)] == [[[1.0]], [[2.0]]]
 
 
+def test_a_price_without_a_sale_stays() -> None:
+    (block,) = arrays(pl.DataFrame({**GOOD, "quantity": [1.0, 0.0, 1.0]}))
+    assert block.values is not None
+    np.testing.assert_array_equal(block.values, [[1.0, 0.0], [1.0, np.nan]])
+
+
 GOOD = {
     "ea": ["x"] * 3,
     "product": ["a", "b", "a"],
@@ -96,7 +102,6 @@ GOOD = {
         ("price", ["1", "2", "3"], "'price'.*not numbers"),
         ("price", ["1.00", "n/a", "3"], "'price'.*not numbers"),
         ("price", [True, True, True], "'price'.*not numbers"),
-        ("quantity", [1.0, 0.0, 1.0], "'quantity'"),
         ("quantity", [1.0, -1.0, 1.0], "'quantity'"),
         ("quantity", [1.0, None, 1.0], "'quantity'"),
         ("quantity", [1.0, float("nan"), 1.0], "'quantity'"),

@@ -203,6 +203,9 @@ SENSELESS: list[tuple[str, dict[str, Any]]] = [
     ("screening.extreme", changed(screening={"extreme": [1.5, 4.0]})),
     ("screening.extreme", changed(screening={"extreme": [0.2, 0.5]})),
     ("screening.extreme", changed(screening={"extreme": [4.0, 0.25]})),
+    ("index.splice", changed(index={"window": "expanding"})),
+    ("index.window", changed(index={"window": 12, "splice": "link-month"})),
+    ("index.override.0.window", changed(index={"override": [{"heading": "01", "window": 5, "splice": "link-month"}]})),
     ("index.override.0.heading", changed(index={"override": [{"heading": "X", "window": 13}]})),
 ]
 

@@ -1,7 +1,7 @@
 """The only bridge between frames and (T, N) arrays.
 
-All groups of a panel are coded together: one sort, one scatter into one flat buffer, and each
-group's arrays are views of it.
+All groups of a panel are coded together: the distinct products are sorted once, and one scatter puts
+every row into its cell. The columns of a group lie side by side.
 """
 
 from __future__ import annotations
@@ -32,49 +32,54 @@ class Block:
 class PanelArrays:
     """Every group of a panel over the same T periods.
 
-    `periods` holds the T labels in order, as given. `keys` has one row per group.
+    `periods` holds the T labels in order, as given. `keys` has one row per group, `products` one per
+    column: the group's key and what makes a product. `starts` (B,) are the first columns of the groups.
+    `prices` and `values` are (T, N); NaN = not sold.
     """
 
     periods: pl.Series
     keys: pl.DataFrame
-    offsets: NDArray[np.int64]
-    flat_prices: Array
-    flat_values: Array | None
+    products: pl.DataFrame
+    starts: NDArray[np.intp]
+    prices: Array
+    values: Array | None
 
     def __iter__(self) -> Iterator[Block]:
-        length = len(self.periods)
-        names = self.keys.rows() if self.keys.width else [()] * (len(self.offsets) - 1)
-        for position, key in enumerate(names):
-            cut = slice(int(self.offsets[position]), int(self.offsets[position + 1]))
-            prices = self.flat_prices[cut].reshape(length, -1)
-            values = None if self.flat_values is None else self.flat_values[cut].reshape(length, -1)
-            yield Block(key, prices, values)
+        names = self.keys.rows() if self.keys.width else [()] * len(self.starts)
+        ends = np.append(self.starts[1:], self.prices.shape[1])
+        for key, start, end in zip(names, self.starts, ends, strict=True):
+            cut = slice(int(start), int(end))
+            yield Block(key, self.prices[:, cut], None if self.values is None else self.values[:, cut])
 
 
 def to_arrays(
     frame: pl.DataFrame,
     *,
     by: Sequence[str],
-    product: str,
+    product: str | Sequence[str],
     period: str,
     price: str,
     value: str | None,
     periods: pl.Series | None = None,
+    ordered: bool = True,
 ) -> PanelArrays:
     """Code a long panel into (T, N) arrays per group.
 
     Parameters
     ----------
     frame : one row per `by`, `product` and `period`. A null price means not sold.
+    product : the column, or the columns together, that tell products apart.
     value : a second column to carry along, such as the quantity or turnover; None = prices alone.
     periods : the T labels in order; None = those that occur, sorted.
+    ordered : whether the labels are time, and so must sort as time; places do not.
 
     Raises
     ------
     BadPanel : a product twice in a period; a price that is not positive and finite; a value that
-        is missing or not positive where there is a price.
+        is missing, not finite or negative where there is a price.
     """
-    asked = [*by, product, period, price, *([] if value is None else [value])]
+    identity = [*by, *([product] if isinstance(product, str) else product)]
+    asked = [*identity, period, price, *([] if value is None else [value])]
     missing = [name for name in asked if name not in frame.columns]
     if missing:
         raise MissingColumns("The panel", missing, frame.columns)
@@ -82,38 +87,43 @@ def to_arrays(
         if not frame.schema[name].is_numeric():
             raise BadPanel(f"Column '{name}' of the panel holds {frame.schema[name]}, not numbers.")
     kept = frame.select(asked).filter(pl.col(price).is_not_null() & pl.col(price).cast(pl.Float64).is_not_nan())
-    _check_keys(kept, [*by, product, period])
-    _check_periods(kept[period])
-    _check_positive(kept, price, [*by, product, period])
+    _check_keys(kept, [*identity, period])
+    if ordered:
+        _check_periods(kept[period])
+    _check_numbers(kept, price, [*identity, period], zero=False)
     if value is not None:
-        _check_positive(kept, value, [*by, product, period])
+        _check_numbers(kept, value, [*identity, period], zero=True)
     labels = kept[period].unique().sort() if periods is None else periods
-    codes = pl.DataFrame({period: labels}).with_row_index("_t")
-    kept = kept.join(codes, on=period, how="inner", maintain_order="left").sort([*by, product])
-    return _scatter(kept, list(by), product, price, value, labels)
+    return _scatter(kept, list(by), identity, period, price, value, labels)
 
 
 def _scatter(
-    rows: pl.DataFrame, by: list[str], product: str, price: str, value: str | None, labels: pl.Series
+    rows: pl.DataFrame,
+    by: list[str],
+    identity: list[str],
+    period: str,
+    price: str,
+    value: str | None,
+    labels: pl.Series,
 ) -> PanelArrays:
-    length, height = len(labels), rows.height
-    new_group = _starts(rows, by)
-    new_product = new_group | _starts(rows, [product])
-    group = np.cumsum(new_group) - 1
-    column = np.cumsum(new_product) - 1
-    first_column = column[new_group]
-    counts = np.diff(np.append(first_column, column[-1] + 1 if height else 0))
-    offsets = np.concatenate([[0], np.cumsum(counts * length)]).astype(np.int64)
-    at = offsets[group] + rows["_t"].to_numpy().astype(np.int64) * counts[group] + column - first_column[group]
-    _check_once(at, int(offsets[-1]), rows, [*by, product])
+    coded = rows.join(
+        pl.DataFrame({period: labels}).with_row_index("_t"), on=period, how="inner", maintain_order="left"
+    )
+    products = coded.select(identity).unique().sort(identity)
+    coded = coded.join(products.with_row_index("_i"), on=identity, how="left", maintain_order="left")
+    at = coded["_t"].to_numpy().astype(np.int64) * products.height + coded["_i"].to_numpy()
+    shape = (len(labels), products.height)
+    _check_once(at, shape[0] * shape[1], coded, identity)
 
     def spread(name: str) -> Array:
-        flat = np.full(int(offsets[-1]), np.nan)
-        flat[at] = rows[name].cast(pl.Float64).to_numpy()
-        return flat
+        flat = np.full(shape[0] * shape[1], np.nan)
+        flat[at] = coded[name].cast(pl.Float64).to_numpy()
+        return flat.reshape(shape)
 
-    keys = rows.select(by).filter(pl.Series(new_group)) if by else pl.DataFrame()
-    return PanelArrays(labels, keys, offsets, spread(price), None if value is None else spread(value))
+    opens = _starts(products, by)
+    keys = products.select(by).filter(pl.Series(opens)) if by else pl.DataFrame()
+    starts = np.flatnonzero(opens)
+    return PanelArrays(labels, keys, products, starts, spread(price), None if value is None else spread(value))
 
 
 def _starts(rows: pl.DataFrame, columns: list[str]) -> NDArray[np.bool_]:
@@ -149,14 +159,16 @@ def _check_periods(periods: pl.Series) -> None:
         )
 
 
-def _check_positive(rows: pl.DataFrame, name: str, keys: list[str]) -> None:
+def _check_numbers(rows: pl.DataFrame, name: str, keys: list[str], *, zero: bool) -> None:
     number = pl.col(name).cast(pl.Float64)
-    bad = rows.filter(~(number.is_finite() & (number > 0)).fill_null(False))
+    right = number.is_finite() & (number >= 0 if zero else number > 0)
+    bad = rows.filter(~right.fill_null(False))
     if bad.height:
         example = ", ".join(f"{key} {bad[key][0]}" for key in keys)
+        wanted = "negative" if zero else "not positive"
         raise BadPanel(
-            f"Column '{name}' is missing, not finite or not positive in {bad.height} of {rows.height} priced rows "
-            f"(first: {example}: {bad[name][0]}). An index needs positive figures: drop or mend these rows."
+            f"Column '{name}' is missing, not finite or {wanted} in {bad.height} of {rows.height} priced rows "
+            f"(first: {example}: {bad[name][0]}). No index can be made of that: drop or mend these rows."
         )
 
 

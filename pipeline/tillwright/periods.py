@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import re
+from collections.abc import Sequence
 from datetime import date, timedelta
 
 from tillwright.choices import PeriodKind
@@ -91,6 +92,33 @@ def year_and_month(start: date, kind: PeriodKind) -> tuple[int, int]:
         thursday = start + timedelta(days=3)
         return thursday.year, thursday.month
     return start.year, start.month + (2 if kind == "quarter" else 0)
+
+
+def link_years(labels: Sequence[object], link_month: int) -> list[int] | None:
+    """The year that each period belongs to, a year ending with its link month.
+
+    `labels` are dates, text such as 2024-03, 2024-W07, 2024-Q1 or 2024-03-31, or integers such as 202403.
+    None where they do not tell a month.
+    """
+    years = []
+    for label in labels:
+        try:
+            year, month = _month_of(label)
+        except ValueError:
+            return None
+        years.append(year + (month > link_month))
+    return years
+
+
+def _month_of(label: object) -> tuple[int, int]:
+    if isinstance(label, date):
+        return label.year, label.month
+    text = str(label)
+    for kind, pattern in _PATTERNS.items():
+        if re.fullmatch(pattern, text):
+            return year_and_month(parse_period(text, kind), kind)
+    day = date.fromisoformat(text)
+    return day.year, day.month
 
 
 def periods_of_year(year: int, kind: PeriodKind) -> list[date]:

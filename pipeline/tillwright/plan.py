@@ -8,7 +8,7 @@ from __future__ import annotations
 import glob
 from datetime import date
 from pathlib import Path
-from typing import Annotated, Any, Literal
+from typing import Annotated, Any, Literal, TypeAlias
 
 from pydantic import BaseModel, ConfigDict, Field
 
@@ -163,13 +163,16 @@ class Screening(_Section):
     extreme: Bounds | Literal["off"] = (0.25, 4.0)
 
 
+WindowLength: TypeAlias = Annotated[int, Field(ge=2)] | Literal["expanding"]
+
+
 class IndexOverride(_Section):
     """[[index.override]]: other choices for a heading and everything below it."""
 
     heading: str
     method: Method | None = None
     form: Form | None = None
-    window: Annotated[int, Field(ge=2)] | None = None
+    window: WindowLength | None = None
     splice: Splice | None = None
     onto: Onto | None = None
 
@@ -179,7 +182,7 @@ class IndexChoice(_Section):
 
     method: Method = "geks-tornqvist"
     form: Form = "chained"
-    window: Annotated[int, Field(ge=2)] = 25
+    window: WindowLength = 25
     splice: Splice = "mean"
     onto: Onto = "published"
     override: tuple[IndexOverride, ...] = ()
@@ -189,11 +192,16 @@ class IndexChoice(_Section):
 
         `ancestry` lists the aggregate itself first, then its parents up to the root.
         """
+        nearer = [
+            override for heading in reversed(ancestry) for override in self.override if override.heading == heading
+        ]
+        return self.overridden(*nearer)
+
+    def overridden(self, *overrides: IndexOverride) -> Recipe:
+        """The recipe under overrides, the last of which wins."""
         choice: dict[str, Any] = {name: getattr(self, name) for name in ("method", "form", "window", "splice", "onto")}
-        for heading in reversed(ancestry):
-            for override in self.override:
-                if override.heading == heading:
-                    choice |= override.model_dump(exclude={"heading"}, exclude_none=True)
+        for override in overrides:
+            choice |= override.model_dump(exclude={"heading"}, exclude_none=True)
         if choice["method"] in BILATERAL_FORMULAS:
             return Recipe(choice["method"], form=choice["form"])
         return Recipe(**choice)

@@ -12,7 +12,7 @@ from zoneinfo import ZoneInfo
 from pydantic import TypeAdapter, ValidationError
 
 from tillwright.errors import PlanError, PlanProblem
-from tillwright.periods import parse_period, year_of
+from tillwright.periods import parse_period, periods_a_year, year_of
 from tillwright.plan import DATE_ROLES, Plan
 
 SECTIONS = tuple(name for name in Plan.model_fields if name != "source")
@@ -52,7 +52,8 @@ def examine_plan(path: Path) -> tuple[Plan, list[PlanProblem]]:
         details = error.errors()
         inner = {detail["loc"][0] for detail in details if len(detail["loc"]) > 1}
         # A section whose members are wrong is also told to be too short, since they do not count.
-        problems += [_problem(d) for d in details if not (d["type"] == "too_short" and d["loc"][0] in inner)]
+        told = [_problem(d) for d in details if not (d["type"] == "too_short" and d["loc"][0] in inner)]
+        problems += _joined(told)
         wrong = {str(detail["loc"][0]) for detail in details}
         plan = Plan.model_construct(source=path.resolve(), **{name: _salvage(raw, name, wrong) for name in SECTIONS})
     for check, needs in _CHECKS.items():
@@ -69,8 +70,16 @@ def _salvage(raw: dict[str, Any], name: str, wrong: set[str]) -> Any:
     return TypeAdapter(kind).validate_python(raw[name]) if name in raw else field.default
 
 
+def _joined(problems: list[PlanProblem]) -> Iterator[PlanProblem]:
+    """One problem per key and value, where each kind that was allowed is told by itself."""
+    allowed: dict[tuple[str, str], list[str]] = {}
+    for problem in problems:
+        allowed.setdefault((problem.key, problem.found), []).append(problem.allowed)
+    return (PlanProblem(key, found, ", or ".join(kinds)) for (key, found), kinds in allowed.items())
+
+
 def _problem(detail: Any) -> PlanProblem:
-    key = ".".join(str(part) for part in detail["loc"])
+    key = ".".join(str(part) for part in detail["loc"] if not _UNION_MEMBER.search(str(part)))
     if detail["type"] == "missing":
         return PlanProblem(key, "nothing", "a value; this key is required")
     if detail["type"] == "extra_forbidden":
@@ -230,6 +239,22 @@ def _screening_problems(plan: Plan) -> Iterator[PlanProblem]:
         yield PlanProblem("screening.extreme", str(list(extreme)), "a bound below 1, then one above 1; or 'off'")
 
 
+def _index_problems(plan: Plan) -> Iterator[PlanProblem]:
+    shortest = periods_a_year(plan.plan.period) + 1
+    keys = [f"index.override.{number}" for number in range(len(plan.index.override))]
+    recipes = [plan.index.overridden(), *(plan.index.overridden(override) for override in plan.index.override)]
+    for key, recipe in zip(["index", *keys], recipes, strict=True):
+        if not recipe.is_spliced:
+            continue
+        if recipe.window == "expanding" and recipe.splice != "link-month":
+            yield PlanProblem(f"{key}.splice", repr(recipe.splice), "'link-month', since the window is expanding")
+        elif recipe.splice == "link-month" and isinstance(recipe.window, int) and recipe.window < shortest:
+            allowed = f"{shortest} or more periods, so as to reach the link month, or 'expanding'"
+            yield PlanProblem(f"{key}.window", str(recipe.window), allowed)
+
+
+_UNION_MEMBER = re.compile(r"^(constrained-|literal\[|tuple\[)")
+
 _CHECKS: dict[Callable[[Plan], Iterator[PlanProblem]], tuple[str, ...]] = {
     _scope_problems: ("plan",),
     _feed_problems: ("feed",),
@@ -242,4 +267,5 @@ _CHECKS: dict[Callable[[Plan], Iterator[PlanProblem]], tuple[str, ...]] = {
     _feed_name_problems: ("feed", "item_master", "answer"),
     _answer_problems: ("answer",),
     _screening_problems: ("screening",),
+    _index_problems: ("plan", "index"),
 }

@@ -9,8 +9,9 @@ import polars as pl
 
 from tillwright.errors import UnconnectedPeriods
 from tillwright.kernels.churn import measure_churn
-from tillwright.kernels.methods import Recipe, make_index
+from tillwright.kernels.methods import Recipe, Years, make_index
 from tillwright.panels import Array, Block, to_arrays
+from tillwright.periods import year_and_month
 from tillwright.stages.context import Context
 from tillwright.stages.intake import answers
 
@@ -58,7 +59,9 @@ def _try_index(block: Block, recipe: Recipe, context: Context, periods: pl.Serie
     index, message = np.full(len(prices), np.nan), ""
     for stop in range(end, start, -1):
         try:
-            index[start:stop] = make_index(prices[start:stop], quantities[start:stop], recipe)
+            index[start:stop] = make_index(
+                prices[start:stop], quantities[start:stop], recipe, years=_link_years(context, periods[start:stop])
+            )
             break
         except UnconnectedPeriods as error:
             labels = [context.label(day) for day in periods[start:stop]]
@@ -71,6 +74,13 @@ def _try_index(block: Block, recipe: Recipe, context: Context, periods: pl.Serie
             "in common, or no window that reaches across the gap; imputed from the heading above"
         )
     return (index if np.isfinite(index).any() else None), message
+
+
+def _link_years(context: Context, periods: pl.Series) -> Years:
+    """The year that each period belongs to, ending in the link month of the weights."""
+    ends = (year_and_month(day, context.plan.plan.period) for day in periods)
+    link_month = context.plan.weights.link_month
+    return np.array([year + (month > link_month) for year, month in ends], dtype=np.int64)
 
 
 def _empty_leaves(context: Context, periods: pl.Series, compiled: Collection[str]) -> list[tuple[str, str, str]]:

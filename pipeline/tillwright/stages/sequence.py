@@ -193,6 +193,7 @@ def _index_inputs(context: Context) -> list[str]:
         context.references.weights.write_csv(),
         context.references.outside.write_csv(),
         context.plan.index.model_dump_json(),
+        str(context.plan.weights.link_month),
         tree,
         *_answers(context),
     ]
