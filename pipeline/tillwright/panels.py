@@ -106,24 +106,35 @@ def _scatter(
     value: str | None,
     labels: pl.Series,
 ) -> PanelArrays:
-    coded = rows.join(
-        pl.DataFrame({period: labels}).with_row_index("_t"), on=period, how="inner", maintain_order="left"
-    )
-    products = coded.select(identity).unique().sort(identity)
-    coded = coded.join(products.with_row_index("_i"), on=identity, how="left", maintain_order="left")
-    at = coded["_t"].to_numpy().astype(np.int64) * products.height + coded["_i"].to_numpy()
+    kept, period_of = _number_periods(rows, period, labels)
+    # One hash grouping finds the distinct products and their rows; only the distinct ones are sorted.
+    grouped = kept.select(identity).with_row_index("_row").group_by(identity).agg("_row").sort(identity)
+    products = grouped.select(identity)
+    order = grouped["_row"].explode(empty_as_null=False).to_numpy()
+    at = np.repeat(np.arange(products.height), grouped["_row"].list.len().to_numpy())
+    at += period_of[order].astype(np.int64) * products.height
     shape = (len(labels), products.height)
-    _check_once(at, shape[0] * shape[1], coded, identity)
+    _check_once(at, order, shape[0] * shape[1], kept, identity)
 
     def spread(name: str) -> Array:
         flat = np.full(shape[0] * shape[1], np.nan)
-        flat[at] = coded[name].cast(pl.Float64).to_numpy()
+        flat[at] = kept[name].cast(pl.Float64).to_numpy()[order]
         return flat.reshape(shape)
 
     opens = _starts(products, by)
     keys = products.select(by).filter(pl.Series(opens)) if by else pl.DataFrame()
     starts = np.flatnonzero(opens)
     return PanelArrays(labels, keys, products, starts, spread(price), None if value is None else spread(value))
+
+
+def _number_periods(rows: pl.DataFrame, period: str, labels: pl.Series) -> tuple[pl.DataFrame, NDArray[np.uint32]]:
+    """The rows whose period is among the labels, and its position for each of them."""
+    codes = pl.DataFrame({period: labels}).with_row_index("_t")
+    numbers = rows.select(period).join(codes, on=period, how="left", maintain_order="left")["_t"]
+    known = numbers.is_not_null()
+    if known.all():
+        return rows, numbers.to_numpy()
+    return rows.filter(known), numbers.drop_nulls().to_numpy()
 
 
 def _starts(rows: pl.DataFrame, columns: list[str]) -> NDArray[np.bool_]:
@@ -172,10 +183,12 @@ def _check_numbers(rows: pl.DataFrame, name: str, keys: list[str], *, zero: bool
         )
 
 
-def _check_once(at: NDArray[np.int64], size: int, rows: pl.DataFrame, keys: list[str]) -> None:
+def _check_once(
+    at: NDArray[np.int64], order: NDArray[np.uint32], size: int, rows: pl.DataFrame, keys: list[str]
+) -> None:
     taken = np.bincount(at, minlength=size) if len(at) else np.zeros(0, dtype=np.int64)
     if (taken > 1).any():
-        first = rows.row(int(np.flatnonzero(taken[at] > 1)[0]), named=True)
+        first = rows.row(int(order[taken[at] > 1].min()), named=True)
         example = ", ".join(f"{key} {first[key]}" for key in keys)
         raise BadPanel(
             f"Products occur more than once in a period, {int((taken > 1).sum())} times (first: {example}). A panel "

@@ -211,18 +211,16 @@ def make_levels(arrays: PanelArrays, asked: Asked, years: Years | None, reach: P
     Groups that begin and end in the same periods are compiled together.
     """
     levels = np.full((len(asked.recipes), *reach.shape[:1], len(arrays.periods)), np.nan)
-    kinds = (
-        [at for at, recipe in enumerate(asked.recipes) if recipe.is_bilateral],
-        [at for at, recipe in enumerate(asked.recipes) if not recipe.is_bilateral],
-    )
-    whole = np.array([0, len(arrays.periods) - 1])
-    # A bilateral series starts by itself in its first priced period, so all groups go together.
-    for positions, bounds in zip(kinds, (np.broadcast_to(whole, reach.shape), reach), strict=True):
+    rolling = [recipe.is_spliced and recipe.window != "expanding" for recipe in asked.recipes]
+    # Rolling windows begin where a group does; nothing else depends on empty periods around it.
+    bounds = {True: reach, False: np.broadcast_to([0, len(arrays.periods) - 1], reach.shape)}
+    for kind, span in bounds.items():
+        positions = [at for at, rolls in enumerate(rolling) if rolls == kind]
         if not positions:
             continue
         recipes = [asked.recipes[at] for at in positions]
-        for first, last in np.unique(bounds, axis=0):
-            members = np.flatnonzero((bounds == (first, last)).all(axis=1))
+        for first, last in np.unique(span, axis=0):
+            members = np.flatnonzero((span == (first, last)).all(axis=1))
             prices, values, starts = _part(arrays, members, slice(first, last + 1))
             failures: list[Failure] = []
             made = make_indexes(

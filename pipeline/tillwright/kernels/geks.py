@@ -6,7 +6,7 @@ import numpy as np
 from numpy.lib.stride_tricks import sliding_window_view
 
 from tillwright.errors import UnconnectedPeriods
-from tillwright.kernels.network import fit_levels
+from tillwright.kernels.network import Flags, fit_levels
 from tillwright.kernels.pairs import Array
 from tillwright.kernels.windows import Windows, anchor, settle
 
@@ -42,17 +42,24 @@ def window_levels(log_pairs: Array, windows: Windows, *, apart: list[Unconnected
     matrices = np.diagonal(blocks, axis1=1, axis2=2).transpose(0, 3, 1, 2)
     covered = windows.covered()
     levels = matrices.mean(axis=-2)
-    incomplete = ~np.isfinite(levels).all(axis=(0, 2)) | ~covered.all(axis=1)
-    for row in np.flatnonzero(incomplete):
-        levels[:, row] = _fit_incomplete(matrices[:, row], covered[row], int(row) - windows.before, apart)
+    incomplete = ~np.isfinite(levels).all(axis=2) | ~covered.all(axis=1)
+    for row in np.flatnonzero(incomplete.any(axis=0)):
+        members = np.flatnonzero(incomplete[:, row])
+        present, linked = _what_exists(matrices[members, row], covered[row])
+        settle(linked, present, int(row) - windows.before, apart, members)
+        levels[members, row] = _fit_incomplete(matrices[members, row], linked, present)
     return anchor(levels).reshape(*log_pairs.shape[:-2], *levels.shape[1:])
 
 
-def _fit_incomplete(pairs: Array, covered: np.ndarray, start: int, apart: list[UnconnectedPeriods] | None) -> Array:
-    """(B, W) least-squares log levels of one window over the pairs that exist within it."""
+def _what_exists(pairs: Array, covered: Flags) -> tuple[Flags, Flags]:
+    """(B, W) periods with products and (B, W, W) pairs with a common one, within the window."""
     present = np.isfinite(pairs.diagonal(axis1=1, axis2=2)) & covered
     linked = np.isfinite(pairs) & covered & covered[:, None]
-    settle(linked, present, start, apart)
+    return present, linked
+
+
+def _fit_incomplete(pairs: Array, linked: Flags, present: Flags) -> Array:
+    """(B, W) least-squares log levels of one window over the pairs that exist within it."""
     levels = fit_levels(linked.astype(np.float64), np.where(linked, pairs, 0.0))
     return np.where(present, levels, np.nan)
 

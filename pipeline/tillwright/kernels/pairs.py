@@ -12,7 +12,7 @@ a leading axis, and so do the sums over all segments but one.
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable
-from typing import TypeAlias
+from typing import Any, TypeAlias
 
 import numpy as np
 from numpy.typing import NDArray
@@ -24,6 +24,8 @@ PairSum: TypeAlias = Callable[[str, str], Array]
 
 # Products are taken in blocks whose fields stay in a core's cache: 32 768 numbers are 256 KB a field.
 BLOCK = 1 << 15
+# From this many blocks on, products with like lives go together, in as many classes of first period.
+MANY = 8
 
 
 def sum_all_pairs(
@@ -48,9 +50,11 @@ def sum_all_pairs(
     """
     pairs = list(dict.fromkeys(min(pair, pair[::-1]) for pair in wanted))
     shape = (len(prices), len(prices))
-    totals = _accumulate(
-        make_fields, (prices, quantities), pairs, lambda a, b: _banded_product(a, b, span), shape, segments
-    )
+
+    def add(total: Array, left: Array, right: Array, rows: slice) -> None:
+        total[rows, rows] += _banded_product(left, right, span)
+
+    totals = _accumulate((prices, quantities), pairs, add, shape, segments)
     if leave_out:
         totals = {pair: sum_others(parts) for pair, parts in totals.items()}
 
@@ -80,11 +84,11 @@ def sum_listed_pairs(
     """
     pairs = list(dict.fromkeys(wanted))
 
-    def multiply(left: Array, right: Array) -> Array:
-        products: Array = np.einsum("ki,ki->k", left[base], right[current])
-        return products
+    def add(total: Array, left: Array, right: Array, rows: slice) -> None:
+        here = (np.minimum(base, current) >= rows.start) & (np.maximum(base, current) < rows.stop)
+        total[here] += np.einsum("ki,ki->k", left[base[here] - rows.start], right[current[here] - rows.start])
 
-    totals = _accumulate(make_fields, (prices, quantities, weights), pairs, multiply, (len(base),), segments)
+    totals = _accumulate((prices, quantities, weights), pairs, add, (len(base),), segments)
     if leave_out:
         totals = {pair: sum_others(parts) for pair, parts in totals.items()}
     return lambda first, second: totals[first, second]
@@ -111,29 +115,58 @@ def sum_others(parts: Array) -> Array:
 
 
 def _accumulate(
-    fields: Callable[..., Callable[[str], Array]],
     data: tuple[Array | None, ...],
     pairs: list[Pair],
-    multiply: Callable[[Array, Array], Array],
+    add: Callable[[Array, Array, Array, slice], None],
     shape: tuple[int, ...],
     segments: Positions | None,
 ) -> dict[Pair, Array]:
-    """Sums of each pair of fields, block by block of products; (B, *shape), or `shape` without segments."""
-    assert data[0] is not None
-    periods, products = data[0].shape
+    """Sums of each pair of fields, block by block of products; (B, *shape), or `shape` without segments.
+
+    `add` adds a block's part to a sum, from its fields in the rows in which it sells anything.
+    """
+    prices = data[0]
+    assert prices is not None
+    products = prices.shape[1]
     starts = np.zeros(1, dtype=np.intp) if segments is None else segments
     ends = np.append(starts[1:], products)
     totals = {pair: np.zeros((len(starts), *shape)) for pair in pairs}
-    width = max(BLOCK // max(periods, 1), 1)
+    order, first, after = _by_life(prices, starts)
+    width = max(BLOCK // max(len(prices), 1), 1)
     for low in range(0, products, width):
         high = min(low + width, products)
-        field = fields(*(None if part is None else part[..., low:high] for part in data))
-        first, last = np.searchsorted(ends, low, side="right"), np.searchsorted(starts, high)
-        for position in range(int(first), int(last)):
-            cut = slice(max(int(starts[position]), low) - low, min(int(ends[position]), high) - low)
+        columns = slice(low, high) if order is None else order[low:high]
+        rows = slice(int(first[columns].min()), int(after[columns].max()))
+        field = make_fields(*(_cut(part, rows, columns) for part in data))
+        position, last = np.searchsorted(ends, low, side="right"), np.searchsorted(starts, high)
+        for segment in range(int(position), int(last)):
+            cut = slice(max(int(starts[segment]), low) - low, min(int(ends[segment]), high) - low)
             for left, right in pairs:
-                totals[left, right][position] += multiply(field(left)[:, cut], field(right)[:, cut])
+                add(totals[left, right][segment], field(left)[:, cut], field(right)[:, cut], rows)
     return totals if segments is not None else {pair: parts[0] for pair, parts in totals.items()}
+
+
+def _cut(part: Array | None, rows: slice, columns: slice | Positions) -> Any:
+    """Rows and columns of a (T, N) array, or columns of an (N,) one."""
+    if part is None:
+        return None
+    if part.ndim == 1 or isinstance(columns, slice):
+        return part[..., columns] if part.ndim == 1 else part[rows, columns]
+    return part[rows].take(columns, axis=1)
+
+
+def _by_life(prices: Array, starts: Positions) -> tuple[Positions | None, Positions, Positions]:
+    """An order of columns within segments that puts those sold at the same time together, None = as they are.
+
+    With the first period of each column and the one after its last, both by column.
+    """
+    periods, products = prices.shape
+    if prices.size <= MANY * BLOCK:
+        return None, np.zeros(products, dtype=np.intp), np.full(products, periods)
+    sold = np.isfinite(prices)
+    first, after = sold.argmax(axis=0), periods - sold[::-1].argmax(axis=0)
+    segment = np.repeat(np.arange(len(starts)), np.diff(np.append(starts, products)))
+    return np.lexsort((after, first // max(periods // MANY, 1), segment)), first, after
 
 
 def make_fields(prices: Array, quantities: Array | None, weights: Array | None = None) -> Callable[[str], Array]:

@@ -13,8 +13,8 @@ from tillwright.errors import UnconnectedPeriods
 from tillwright.kernels.network import Flags, find_groups
 from tillwright.kernels.pairs import Array, Positions, sum_others, sum_segments
 
-# Matrices of all windows and segments together are held below this many numbers (32 MB) at a time.
-HELD = 1 << 22
+# Matrices of windows and segments are solved so many numbers (1 MB) at a time, to stay in a core's cache.
+HELD = 1 << 17
 
 
 @dataclass(frozen=True, slots=True)
@@ -88,19 +88,18 @@ def fit_windows(
     UnconnectedPeriods : the priced periods of a window share no chain of products.
     """
     starts = np.zeros(1, dtype=np.intp) if segments is None else segments
-    left, rights = windows.pad(left, 0.0), [windows.pad(right, 0.0) for right in rights]
     length, count = windows.length, len(windows.skipped)
-    sold = left > 0
-    present = sum_segments(sold.astype(np.float64), starts)
+    present = sum_segments((windows.pad(left, 0.0) > 0).astype(np.float64), starts)
     if leave_out:
         present = sum_others(present)
+    fields = _Fields(windows, left, rights)
     levels = np.full((len(starts), count, length), np.nan)
     held = max(HELD // (len(starts) * length * length * len(rights)), 1)
     for low in range(0, count, held):
         rows = range(low, min(low + held, count))
         matrices = [np.zeros((len(starts), len(rows), length, length)) for _ in rights]
         for at, row in enumerate(rows):
-            _fill([matrix[:, at] for matrix in matrices], left, rights, sold, row, windows, starts)
+            fields.fill([matrix[:, at] for matrix in matrices], row, starts)
         if leave_out:
             matrices = [sum_others(matrix) for matrix in matrices]
         here = sliding_window_view(present > 0, length, axis=1)[:, rows.start : rows.stop] & windows.covered()[rows]
@@ -110,37 +109,45 @@ def fit_windows(
     return anchor(levels)
 
 
-def _fill(
-    into: list[Array],
-    left: Array,
-    rights: Sequence[Array],
-    sold: Flags,
-    row: int,
-    windows: Windows,
-    starts: Positions,
+class _Fields:
+    """The fields of `fit_windows`, with the number of times that each product was sold up to each period."""
+
+    def __init__(self, windows: Windows, left: Array, rights: Sequence[Array]) -> None:
+        self.windows = windows
+        self.left, *self.rights = (windows.pad(field, 0.0) for field in (left, *rights))
+        self.sold = np.zeros((len(self.left) + 1, self.left.shape[1]), dtype=np.int32)
+        np.cumsum(self.left > 0, axis=0, out=self.sold[1:])
+
+    def fill(self, into: Sequence[Array], row: int, starts: Positions) -> None:
+        """Write the matrices of one window, (B, W, W) each, of all segments."""
+        skip = int(self.windows.skipped[row])
+        first, after = row + skip, row + self.windows.length
+        traded = np.flatnonzero(self.sold[after] - self.sold[first] > 1)
+        share = self.left[first:after].take(traded, axis=1)
+        share /= share.sum(axis=0)
+        bounds = np.append(np.searchsorted(traded, starts), len(traded))
+        for matrix, right in zip(into, self.rights, strict=True):
+            field = right[first:after].take(traded, axis=1)
+            for position in np.flatnonzero(np.diff(bounds)):
+                cut = slice(bounds[position], bounds[position + 1])
+                matrix[position, skip:, skip:] = share[:, cut] @ field[:, cut].T
+
+
+def settle(
+    linked: Flags,
+    present: Flags,
+    start: int,
+    apart: list[UnconnectedPeriods] | None,
+    segments: Positions | None = None,
 ) -> None:
-    """The matrices of one window, (B, W, W) each, of all segments."""
-    skip = int(windows.skipped[row])
-    periods = slice(row + skip, row + windows.length)
-    traded = np.flatnonzero(sold[periods].sum(axis=0, dtype=np.int32) > 1)
-    share = left[periods].take(traded, axis=1)
-    share /= share.sum(axis=0)
-    bounds = np.append(np.searchsorted(traded, starts), len(traded))
-    for matrix, right in zip(into, rights, strict=True):
-        field = right[periods].take(traded, axis=1)
-        for position in np.flatnonzero(np.diff(bounds)):
-            cut = slice(bounds[position], bounds[position + 1])
-            matrix[position, skip:, skip:] = share[:, cut] @ field[:, cut].T
-
-
-def settle(linked: Flags, present: Flags, start: int, apart: list[UnconnectedPeriods] | None) -> None:
     """Raise UnconnectedPeriods for the first of B windows that falls apart, or note all in `apart`.
 
     `linked` (B, W, W) tells which periods have a product in common, `present` (B, W) which have any; the
-    windows begin in period `start`.
+    windows begin in period `start` and are those of `segments`, None = of all.
     """
-    for segment, groups in enumerate(find_groups(linked, present)):
+    for position, groups in enumerate(find_groups(linked, present)):
         if groups:
+            segment = position if segments is None else int(segments[position])
             problem = UnconnectedPeriods([[start + member for member in group] for group in groups], segment=segment)
             if apart is None:
                 raise problem
