@@ -59,7 +59,7 @@ def bilateral(
     ------
     CallError, BadPanel, MissingColumns
 
-    Reference: `tillwright.kernels.bilateral`, `tillwright.kernels.sato_vartia`.
+    Reference: `tillwright.kernels.formulas`, `tillwright.kernels.sato_vartia`.
     """
     asked = ask(formula, FORMULAS, form=form, name="formula")
     columns = named(by, period, product, price, quantity)

@@ -11,15 +11,8 @@ from numpy.typing import NDArray
 
 from tillwright.errors import CallError, UnconnectedPeriods
 from tillwright.kernels import geary_khamis, geks, similarity, time_product_dummy
-from tillwright.kernels.bilateral import (
-    BASE_WEIGHTED,
-    BILATERAL,
-    PRICES_ONLY,
-    SATO_VARTIA,
-    logs_of_pairs,
-    series_of_segments,
-    wanted_pairs,
-)
+from tillwright.kernels.bilateral import logs_of_pairs, series_of_segments
+from tillwright.kernels.formulas import BASE_WEIGHTED, BILATERAL, PRICES_ONLY, SATO_VARTIA, wanted_pairs
 from tillwright.kernels.pairs import Array, Pair, PairSum, Positions, sum_all_pairs
 from tillwright.kernels.splicing import splice
 from tillwright.kernels.windows import Windows

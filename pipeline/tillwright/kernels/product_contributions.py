@@ -8,7 +8,8 @@ import numpy as np
 
 from tillwright.errors import CallError, NoLevel
 from tillwright.kernels import geary_khamis, similarity, time_product_dummy
-from tillwright.kernels.bilateral import BASE_WEIGHTED, log_pair_levels, wanted_pairs
+from tillwright.kernels.bilateral import log_pair_levels
+from tillwright.kernels.formulas import BASE_WEIGHTED, wanted_pairs
 from tillwright.kernels.link_contributions import contribute, ratio_parts
 from tillwright.kernels.methods import Recipe, Years, make_index, period_weights, window_length, windows_of
 from tillwright.kernels.pairs import Array, Positions, make_fields, sum_all_pairs
