@@ -3,6 +3,7 @@
 import filecmp
 import gzip
 import json
+import shutil
 from decimal import Decimal
 from pathlib import Path
 from typing import Any
@@ -13,7 +14,7 @@ import pytest
 
 import tillwright as tw
 from tests.sample.generate import write_sample
-from tillwright.stages.compiling import Compiled
+from tillwright.stages.compiling import Compiled, Request, carry_out
 
 TRUTH = Path(__file__).parent / "sample"
 GEKS = "geks-tornqvist, window 25, mean splice onto published"
@@ -230,3 +231,31 @@ def test_the_sample_keeps_to_its_budget(sample_folder: Path) -> None:
 def given_files(folder: Path) -> list[Path]:
     """Files of the sample, without a workspace that a compile may have left beside the plan."""
     return [p for p in folder.rglob("*") if p.is_file() and p.relative_to(folder).parts[0] != "work"]
+
+
+@pytest.mark.parametrize(
+    "settings",
+    [
+        {"method": "tpd", "window": "expanding", "splice": "link-month"},
+        {"method": "geary-khamis", "window": 14, "splice": "link-month"},
+        {"method": "geks-fisher", "window": "expanding", "splice": "link-month"},
+        {"method": "similarity", "window": 13},
+    ],
+    ids=lambda settings: settings["method"],
+)
+def test_a_plan_gives_what_the_function_gives(
+    sample: Compiled, sample_folder: Path, tmp_path: Path, settings: dict[str, Any]
+) -> None:
+    shutil.copytree(sample_folder, tmp_path / "plan", ignore=shutil.ignore_patterns("work"))
+    shutil.copytree(sample.context.workspace.root, tmp_path / "work")
+    plan = tmp_path / "plan" / "plan.toml"
+    text = plan.read_text(encoding="utf-8")
+    chosen = "".join(f"{name} = {json.dumps(value)}\n" for name, value in settings.items())
+    start, end = text.index("[index]\n"), text.index("[[outside_series]]")
+    plan.write_text(f"{text[:start]}[index]\n{chosen}\n{text[end:]}", encoding="utf-8")
+    compiled = carry_out(Request(plan, tmp_path / "work")).context.workspace.read("ea_indexes")
+    kept = sample.context.workspace.read("screened").filter(pl.col("verdict") == "kept")
+    expected = tw.multilateral(kept, **settings, by="ea")
+    both = compiled.join(expected, on=["ea", "period"], how="full", coalesce=True, validate="1:1")
+    np.testing.assert_allclose(both["level"].to_numpy(), both["index"].to_numpy(), rtol=1e-9)
+    assert both.height == compiled.height
