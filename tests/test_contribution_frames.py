@@ -18,7 +18,8 @@ ADDS_UP = 1e-9
 BY_HAND = 1e-12
 """A few products and two periods."""
 MONTHS = [f"{2023 + (m - 1) // 12}-{(m - 1) % 12 + 1:02d}" for m in range(10, 20)]
-COLUMNS = ["product", "status", "contribution"]
+FIGURES = ["status", "contribution", "price_start", "price_end", "share_start", "share_end"]
+COLUMNS = ["product", *FIGURES]
 BASE_WEIGHTED = ("lowe", "young", "geometric-young")
 SPLICED = [name for name in MULTILATERAL_METHODS if name != "similarity"]
 WINDOWS: list[dict[str, Any]] = [
@@ -158,7 +159,7 @@ def test_an_index_that_ends_where_it_began_has_contributions_that_cancel() -> No
 @pytest.mark.parametrize("method", ["tornqvist", "tpd", "geary-khamis", "geks-fisher", "similarity"])
 def test_status_is_told_by_where_a_product_is_sold(method: str) -> None:
     whole = statuses(tw.contributions(panel(), method, MONTHS[0], MONTHS[-1]))
-    assert whole.pop("p3", "between") == "between"
+    assert whole.pop("p3", "neither") == "neither"
     expected = {"p0": "continuing", "p1": "entering", "p2": "exiting", "p4": "continuing", "p5": "continuing"}
     assert whole == expected
     middle = statuses(tw.contributions(panel(), method, MONTHS[2], MONTHS[4]))
@@ -168,7 +169,7 @@ def test_status_is_told_by_where_a_product_is_sold(method: str) -> None:
 @pytest.mark.parametrize("method", ["tornqvist", "fisher"])
 def test_a_product_sold_between_only_contributes_to_a_chain(method: str) -> None:
     found = tw.contributions(panel(), method, MONTHS[0], MONTHS[-1], form="chained")
-    assert statuses(found)["p3"] == "between"
+    assert statuses(found)["p3"] == "neither"
     assert abs(points(found)["p3"]) > 1e-6
 
 
@@ -213,7 +214,7 @@ def test_labels_may_be_integers_and_dates(labels: list[Any]) -> None:
 def test_columns_may_have_other_names() -> None:
     names = {"period": "month", "product": "gtin", "price": "unit_value", "quantity": "units"}
     found = tw.contributions(panel().rename(names), "tpd", MONTHS[0], MONTHS[-1], **names)  # type: ignore[arg-type]
-    assert found.columns == ["gtin", "status", "contribution"]
+    assert found.columns == ["gtin", *FIGURES]
     assert points(found.rename({"gtin": "product"})) == pytest.approx(
         points(tw.contributions(panel(), "tpd", MONTHS[0], MONTHS[-1])), abs=ADDS_UP
     )
@@ -256,3 +257,44 @@ def test_a_missing_quantity_is_told() -> None:
     assert tw.contributions(panel().drop("quantity"), "jevons", MONTHS[0], MONTHS[-1]).columns == COLUMNS
     with pytest.raises(MissingColumns, match="'quantity'"):
         tw.contributions(panel().drop("quantity"), "fisher", MONTHS[0], MONTHS[-1])
+
+
+def test_prices_and_shares_are_those_of_the_two_periods() -> None:
+    found = tw.contributions(panel(), "geks-tornqvist", MONTHS[2], MONTHS[4])
+    for month, side in ((MONTHS[2], "start"), (MONTHS[4], "end")):
+        sold = panel().filter(pl.col("period") == month).with_columns(value=pl.col("price") * pl.col("quantity"))
+        expected = sold.with_columns(pl.col("value") / pl.col("value").sum()).sort("product")
+        mine = found.filter(pl.col("product").is_not_null()).sort("product")
+        np.testing.assert_allclose(mine[f"price_{side}"].to_numpy(), expected["price"].to_numpy(), rtol=1e-15)
+        np.testing.assert_allclose(mine[f"share_{side}"].to_numpy(), expected["value"].to_numpy(), rtol=1e-12)
+
+
+def test_several_methods_and_windows_stand_side_by_side() -> None:
+    asked: dict[str, Any] = {"window": [3, "all"], "splice": "movement"}
+    found = tw.contributions(panel(), ["tpd", "geks-fisher"], MONTHS[0], MONTHS[-1], **asked)
+    assert found.columns == ["method", "window", *COLUMNS]
+    for method in ("tpd", "geks-fisher"):
+        for window in (3, "all"):
+            alone = tw.contributions(panel(), method, MONTHS[0], MONTHS[-1], window=window, splice="movement")
+            mine = found.filter(pl.col("method") == method, pl.col("window") == str(window)).drop("method", "window")
+            assert points(mine) == pytest.approx(points(alone), abs=ADDS_UP)
+
+
+def test_a_group_without_a_level_is_told_and_the_others_go_on() -> None:
+    late = two_groups().filter((pl.col("ea") == "tea") | (pl.col("period") > MONTHS[2]))
+    found = tw.contributions(late, "tornqvist", MONTHS[0], MONTHS[-1], by="ea")
+    milk = found.filter(pl.col("ea") == "milk")
+    assert milk.select("status", "contribution").rows() == [("missing", None)]
+    expected = change(tw.indexes(late.filter(pl.col("ea") == "tea"), "tornqvist"), MONTHS[0], MONTHS[-1])
+    assert found.filter(pl.col("ea") == "tea")["contribution"].sum() == pytest.approx(expected, abs=ADDS_UP)
+
+
+def test_a_product_column_called_like_a_result_is_refused() -> None:
+    with pytest.raises(CallError, match="'status'"):
+        tw.contributions(panel().rename({"product": "status"}), "tpd", MONTHS[0], MONTHS[-1], product="status")
+
+
+def test_a_month_stands_for_the_only_date_in_it() -> None:
+    dated = panel().with_columns(pl.col("period").str.to_date("%Y-%m"))
+    found = tw.contributions(dated, "tpd", MONTHS[0], MONTHS[-1])
+    assert points(found) == pytest.approx(points(tw.contributions(panel(), "tpd", MONTHS[0], MONTHS[-1])), abs=ADDS_UP)

@@ -232,7 +232,7 @@ def test_what_was_written_is_told_as_text_and_as_json(index: Index, tmp_path: Pa
     assert str(out) in told
     assert "4 series" in told
     said = json.loads(index(*arguments, "--json").stdout)
-    assert said == {"out": str(out), "method": "geks-fisher", "series": 4, "rows": 20}
+    assert said == {"out": str(out), "method": "geks-fisher", "series": 4, "empty": 0, "rows": 20}
 
 
 def test_the_methods_on_offer_are_the_formulas_and_the_multilateral_methods() -> None:

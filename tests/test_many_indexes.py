@@ -13,8 +13,9 @@ from numpy.typing import NDArray
 
 import tillwright as tw
 from tillwright.choices import BILATERAL_FORMULAS, FORMS, METHODS, MULTILATERAL_METHODS, ONTO, SPLICES
-from tillwright.errors import BadPanel, CallError, MissingColumns
-from tillwright.kernels.methods import Recipe, make_index
+from tillwright.errors import BadPanel, CallError, MissingColumns, UnconnectedPeriods
+from tillwright.kernels.methods import make_index
+from tillwright.kernels.recipes import Recipe
 
 SAME = 1e-10
 """One call or many: sums in another order, fixed points from another start."""
@@ -172,9 +173,10 @@ def test_an_argument_that_does_not_apply_is_null_and_its_combination_comes_once(
 
 def test_one_window_has_no_splice() -> None:
     found = tw.multilateral(panel(), "tpd", window=[None, 3], splice=["mean", "half"], onto=list(ONTO))
-    expected = [(None, None, None), *itertools.product(["3"], ["mean", "half"], ONTO)]
+    expected = [("all", None, None), *itertools.product(["3"], ["mean", "half"], ONTO)]
     assert sorted(combinations(found), key=str) == sorted(expected, key=str)
-    same(picked(found, window=None), tw.multilateral(panel(), "tpd"))
+    same(picked(found, window="all"), tw.multilateral(panel(), "tpd", window="all"))
+    same(tw.multilateral(panel(), "tpd", window="all"), tw.multilateral(panel(), "tpd"))
 
 
 def test_the_link_month_splice_has_nothing_to_be_linked_onto() -> None:
@@ -308,7 +310,8 @@ def test_a_window_that_does_not_reach_its_link_month_is_refused() -> None:
 
 def test_groups_add_errors_and_changes_to_the_same_index() -> None:
     found = tw.indexes(panel(), ["fisher", "tpd"], groups=3)
-    assert set(found.columns) == {"method", *OUTPUT, "standard_error", "change", "change_error"}
+    assert set(found.columns) == {"method", *OUTPUT, "standard_error", "change", "change_error", "groups"}
+    assert found["groups"].unique().to_list() == [3]
     same(found.select("method", *OUTPUT), tw.indexes(panel(), ["fisher", "tpd"]))
     for method in ("fisher", "tpd"):
         index = picked(found, method=method)
@@ -436,3 +439,110 @@ def test_lists_may_be_tuples() -> None:
 def test_a_group_error_is_finite_wherever_there_is_an_index() -> None:
     found = tw.indexes(panel(), ["jevons", "similarity", "geks-walsh"], groups=2)
     assert all(math.isfinite(error) for error in found["standard_error"])
+
+
+def test_errors_are_made_of_the_replicates() -> None:
+    asked: dict[str, Any] = {"groups": 3, "window": 4, "by": "ea"}
+    made = tw.replicates(groups_of_different_length(), ["fisher", "tpd"], **asked)
+    assert made.columns == ["ea", "method", "without", "period", "index"]
+    assert sorted(made["without"].unique()) == [1, 2, 3]
+    errors = tw.indexes(groups_of_different_length(), ["fisher", "tpd"], **asked)
+    for (ea, method, period), rows in made.group_by("ea", "method", "period"):
+        cell = (pl.col("ea") == ea) & (pl.col("method") == method) & (pl.col("period") == period)
+        expected = errors.filter(cell)["standard_error"].item()
+        if expected is None:
+            assert rows["index"].null_count() > 0
+        else:
+            assert level_error(rows["index"].to_numpy()) == pytest.approx(expected, rel=1e-8, abs=1e-9)
+
+
+def test_a_replicate_without_the_first_period_gives_no_error() -> None:
+    # Only p0 is sold at first; without it a series would start, and be 100, a month later.
+    rows = [(MONTHS[t], f"p{i}", (1.0 + i) * 2.0**t, 1.0 + i) for t in range(5) for i in range(6) if t > 0 or i == 0]
+    frame = pl.DataFrame(rows, schema=["period", "product", "price", "quantity"], orient="row")
+    for method in ("fisher", "geks-fisher", "tpd", "geary-khamis", "similarity"):
+        found = tw.indexes(frame, method, groups=6)
+        assert found["index"].to_list() == pytest.approx([100.0 * 2**t for t in range(5)])
+        assert found["standard_error"].null_count() == 5
+
+
+def test_an_empty_link_month_gives_way_to_the_period_before() -> None:
+    december = "2023-12"
+    frame = panel(2)
+    holed = frame.filter(pl.col("period") != december)
+    both = pl.concat([frame.with_columns(ea=pl.lit("tea")), holed.with_columns(ea=pl.lit("milk"))])
+    asked: dict[str, Any] = {"window": "expanding", "splice": "link-month"}
+    for method in ("tpd", "geks-fisher"):
+        found = tw.multilateral(both, method, by="ea", **asked).filter(pl.col("ea") == "milk")
+        assert found.filter(pl.col("index").is_null())["period"].to_list() == [december]
+        alone = tw.multilateral(holed, method, **asked)
+        known = found.filter(pl.col("index").is_not_null())
+        np.testing.assert_allclose(known["index"].to_numpy(), alone["index"].to_numpy(), rtol=SAME)
+
+
+def test_weights_of_a_period_that_a_group_lacks_give_it_no_index() -> None:
+    for month in (MONTHS[0], MONTHS[-1]):
+        found = tw.indexes(groups_of_different_length(), "lowe", weight_period=month, by="ea", groups=3)
+        lacking = "milk" if month == MONTHS[0] else "soap"
+        assert found.filter(pl.col("ea") == lacking)["index"].null_count() > 0
+        assert found.filter(pl.col("ea") == "tea")["index"].null_count() == 0
+
+
+def broken() -> pl.DataFrame:
+    """Two groups; in the first nothing of the last two months was sold before, as in the second."""
+    prices, quantities = np.full((6, 4), np.nan), np.full((6, 4), np.nan)
+    prices[:4, :2] = prices[4:, 2:] = 1.0
+    prices *= 1 + 0.1 * np.arange(6)[:, None]
+    quantities[np.isfinite(prices)] = 3.0
+    parts = [frame_of(prices, quantities, MONTHS[:6]).with_columns(ea=pl.lit(name)) for name in ("milk", "soap")]
+    return pl.concat([*parts, panel(3, MONTHS[:6]).with_columns(ea=pl.lit("tea"))])
+
+
+@pytest.mark.parametrize("method", ["geks-fisher", "tpd", "geary-khamis", "similarity"])
+def test_a_window_that_falls_apart_is_refused_or_passed_over(method: str) -> None:
+    with pytest.raises(UnconnectedPeriods, match=r"of ea milk.*1 more group.*blank") as told:
+        tw.multilateral(broken(), method, window=3, by="ea")
+    assert told.value.groups[-1][0] == MONTHS[4]
+    found = tw.multilateral(broken(), method, window=3, by="ea", unconnected="blank")
+    milk = found.filter(pl.col("ea") == "milk")
+    np.testing.assert_allclose(milk["index"][:4].to_numpy(), [100, 110, 120, 130], rtol=1e-12)
+    assert milk["index"][4] is None
+    assert found.filter(pl.col("ea") == "tea")["index"].null_count() == 0
+
+
+def test_over_needs_groups() -> None:
+    with pytest.raises(CallError, match=r"over.*groups"):
+        tw.indexes(outlets(), "fisher", over="outlet")
+
+
+def test_an_expanding_window_without_its_splice_is_refused_beside_others() -> None:
+    with pytest.raises(CallError, match="link-month"):
+        tw.multilateral(panel(), "tpd", window=["expanding", 5])
+
+
+@pytest.mark.parametrize("labels", [["2024-03", "2024-Q2"], ["2024-W13", "20240401"], ["2024-W54", "2024-W55"]])
+def test_labels_that_do_not_sort_as_time_are_refused(labels: list[str]) -> None:
+    rows = [(label, "p", 1.0, 1.0) for label in labels]
+    frame = pl.DataFrame(rows, schema=["period", "product", "price", "quantity"], orient="row")
+    with pytest.raises(BadPanel, match="sort as time"):
+        tw.bilateral(frame, "fisher")
+
+
+@pytest.mark.parametrize("frame", [None, "panel.parquet", 3, pl.Series("price", [1.0]), {"a": [1, 2], "b": [1]}])
+def test_what_is_no_frame_is_refused(frame: Any) -> None:
+    with pytest.raises(CallError, match="The panel is a"):
+        tw.bilateral(frame, "fisher")
+
+
+def test_arrays_of_numpy_and_pandas_are_lists() -> None:
+    asked: Any = np.array(["fisher", "jevons"])
+    same(tw.bilateral(panel(), asked), tw.bilateral(panel(), ["fisher", "jevons"]))
+    windows: Any = np.array([3, 4])
+    same(tw.multilateral(panel(), "tpd", window=windows), tw.multilateral(panel(), "tpd", window=[3, 4]))
+
+
+def test_many_groups_are_compiled_in_parts_with_the_same_result(monkeypatch: pytest.MonkeyPatch) -> None:
+    methods = ["geks-fisher", "tpd", "fisher", "similarity"]
+    expected = tw.indexes(groups_of_different_length(), methods, window=4, by="ea")
+    monkeypatch.setattr("tillwright.kernels.methods.HELD", 1)
+    same(tw.indexes(groups_of_different_length(), methods, window=4, by="ea"), expected)

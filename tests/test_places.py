@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 
 import tillwright as tw
 from tests.kernels import twins
-from tillwright.errors import BadPanel, CallError, DataError, MissingColumns
+from tillwright.errors import BadPanel, CallError, DataError, MissingColumns, UnconnectedPlaces
 
 BY_HAND = 1e-12
 """A few products and two places."""
@@ -278,3 +278,48 @@ def test_a_place_that_shares_no_product_is_named(method: str, settings: dict[str
     assert "2024-01" in str(told.value) or not settings
     # A statistician who compares regions has no windows or periods to change.
     assert "window" not in str(told.value)
+
+
+def test_a_base_of_several_places_has_the_mean_100() -> None:
+    found = place_levels(regions(), "geks-fisher", base=["coast", "hills"])
+    logs = [np.log(level(found)[name] / 100) for name in ("coast", "hills")]
+    assert sum(logs) == pytest.approx(0.0, abs=1e-12)
+
+
+def test_places_that_share_nothing_can_be_left_blank() -> None:
+    apart = pl.DataFrame(
+        {
+            "month": ["1", "1", "2", "2"],
+            "region": ["a", "b"] * 2,
+            "product": ["x", "y", "x", "x"],
+            "price": [1.0, 2.0, 1.0, 2.0],
+            "quantity": [1.0] * 4,
+        }
+    )
+    with pytest.raises(UnconnectedPlaces, match=r"for month 1"):
+        tw.place_levels(apart, "tpd", by="month")
+    found = tw.place_levels(apart, "tpd", by="month", unconnected="blank")
+    assert found.filter(pl.col("month") == "1")["level"].null_count() == 2
+    later = dict(found.filter(pl.col("month") == "2").select("region", "level").iter_rows())
+    assert later["b"] / later["a"] == pytest.approx(2.0)
+
+
+def test_a_place_that_is_alone_has_no_level() -> None:
+    alone = pl.DataFrame({"region": ["a"], "product": ["x"], "price": [1.0], "quantity": [1.0]})
+    found = tw.place_levels(alone, "tpd")
+    assert found.select("level", "products", "shared").rows() == [(None, 1, 0)]
+
+
+def test_a_place_that_sells_nothing_leaves_the_others_their_levels() -> None:
+    quiet = pl.DataFrame(
+        {
+            "region": ["a", "b", "c"] * 2,
+            "product": ["x"] * 3 + ["y"] * 3,
+            "price": [1.0, 2.0, 9.0, 1.0, 2.0, 9.0],
+            "quantity": [1.0, 1.0, 0.0] * 2,
+        }
+    )
+    for method in ("geks-fisher", "tpd", "geary-khamis"):
+        levels = level(tw.place_levels(quiet, method))
+        assert levels["c"] is None
+        assert levels["b"] / levels["a"] == pytest.approx(2.0)

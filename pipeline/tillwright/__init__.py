@@ -1,13 +1,13 @@
 """Tillwright: from till records to price indexes that can be published and defended.
 
 This package's top holds what researchers call, frame in, frame out: `bilateral` and `multilateral`
-indexes, `indexes` of many methods side by side with their standard errors, `contributions` of products,
-and price levels of places.  Layers below import downwards only; see DEVELOPERS.md.
+indexes, `indexes` of many methods side by side with their standard errors, the `replicates` that these
+are made of, `contributions` of products, and `place_levels`.  Layers below import downwards only; see DEVELOPERS.md.
 """
 
 from tillwright.api.contributions import contributions
-from tillwright.api.indexes import bilateral, indexes, multilateral
+from tillwright.api.indexes import bilateral, indexes, multilateral, replicates
 from tillwright.api.places import place_levels
 
-__all__ = ["bilateral", "contributions", "indexes", "multilateral", "place_levels"]
+__all__ = ["bilateral", "contributions", "indexes", "multilateral", "place_levels", "replicates"]
 __version__ = "0.1.0"

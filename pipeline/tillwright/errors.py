@@ -117,22 +117,24 @@ class UnconnectedPeriods(DataError):
     among those compiled together.
     """
 
-    def __init__(self, groups: Sequence[Sequence[object]], where: str = "", *, segment: int = 0) -> None:
+    def __init__(
+        self, groups: Sequence[Sequence[object]], where: str = "", *, segment: int = 0, hint: str = ""
+    ) -> None:
         self.groups = tuple(tuple(group) for group in groups)
         self.where = where
         self.segment = segment
-        sides = " | ".join(_span(group) for group in self.groups)
+        sides = " | ".join(_span(group, "periods") for group in self.groups)
         place = f" of {where}" if where else ""
         super().__init__(
             f"No index can be made over a window{place}: its periods fall into "
             f"{len(self.groups)} groups with no product in common ({sides}). Widen the product "
-            "definition, join relaunched items, or choose a window that does not cross the gap."
+            "definition, join relaunched items, or choose a window that does not cross the gap." + hint
         )
 
-    def labelled(self, labels: Sequence[object], where: str) -> UnconnectedPeriods:
-        """The same error with period labels instead of positions and the place named."""
+    def labelled(self, labels: Sequence[object], where: str, hint: str = "") -> UnconnectedPeriods:
+        """The same error with period labels instead of positions and the place named; a hint is added to the text."""
         named = [[labels[int(str(position))] for position in group] for group in self.groups]
-        return UnconnectedPeriods(named, where, segment=self.segment)
+        return UnconnectedPeriods(named, where, segment=self.segment, hint=hint)
 
 
 class NoLevel(DataError):
@@ -145,11 +147,12 @@ class UnconnectedPlaces(DataError):
     def __init__(self, groups: Sequence[Sequence[str]], where: str = "") -> None:
         self.groups = tuple(tuple(group) for group in groups)
         self.where = where
-        sides = " | ".join(_span(group) for group in self.groups)
+        sides = " | ".join(_span(group, "places") for group in self.groups)
         place = f" for {where}" if where else ""
         super().__init__(
             f"No price levels can be compared{place}: the places fall into {len(self.groups)} groups with no product "
-            f"in common ({sides}). Widen the product definition, or compare the places of each group."
+            f"in common ({sides}). Widen the product definition, compare the places of each group, or leave what "
+            "cannot be compared empty with unconnected 'blank'."
         )
 
 
@@ -188,6 +191,6 @@ def _some(names: Sequence[str]) -> str:
     return shown if len(names) <= 3 else f"{shown} and {len(names) - 3} more"
 
 
-def _span(group: Sequence[object]) -> str:
+def _span(group: Sequence[object], unit: str) -> str:
     shown = [str(member) for member in group]
-    return ", ".join(shown) if len(shown) <= 4 else f"{shown[0]} … {shown[-1]} ({len(shown)} periods)"
+    return ", ".join(shown) if len(shown) <= 4 else f"{shown[0]} … {shown[-1]} ({len(shown)} {unit})"

@@ -8,6 +8,7 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
+from typing import Literal
 
 import numpy as np
 import polars as pl
@@ -16,7 +17,11 @@ from numpy.typing import NDArray
 from tillwright.errors import BadPanel, MissingColumns
 
 Array = NDArray[np.float64]
-_SORTS_AS_TIME = r"^\d{4}(-?(0[1-9]|1[0-2])(-?[0-3]\d)?|-?W[0-5]\d|-?Q[1-4])?$"
+_SORTS_AS_TIME = r"^\d{4}(-?(0[1-9]|1[0-2])(-?[0-3]\d)?|-?W(0[1-9]|[1-4]\d|5[0-3])|-?Q[1-4])?$"
+
+
+# No column of a panel is called so.
+_ROW = "\0row"
 
 
 @dataclass(frozen=True, slots=True)
@@ -44,11 +49,19 @@ class PanelArrays:
     prices: Array
     values: Array | None
 
+    @property
+    def ends(self) -> NDArray[np.intp]:
+        """(B,) the columns after the last ones of the groups."""
+        return np.append(self.starts[1:], self.prices.shape[1])
+
+    @property
+    def cuts(self) -> list[slice]:
+        """The columns of each group."""
+        return [slice(int(start), int(end)) for start, end in zip(self.starts, self.ends, strict=True)]
+
     def __iter__(self) -> Iterator[Block]:
         names = self.keys.rows() if self.keys.width else [()] * len(self.starts)
-        ends = np.append(self.starts[1:], self.prices.shape[1])
-        for key, start, end in zip(names, self.starts, ends, strict=True):
-            cut = slice(int(start), int(end))
+        for key, cut in zip(names, self.cuts, strict=True):
             yield Block(key, self.prices[:, cut], None if self.values is None else self.values[:, cut])
 
 
@@ -61,7 +74,7 @@ def to_arrays(
     price: str,
     value: str | None,
     periods: pl.Series | None = None,
-    ordered: bool = True,
+    unit: Literal["period", "place"] = "period",
 ) -> PanelArrays:
     """Code a long panel into (T, N) arrays per group.
 
@@ -71,7 +84,7 @@ def to_arrays(
     product : the column, or the columns together, that tell products apart.
     value : a second column to carry along, such as the quantity or turnover; None = prices alone.
     periods : the T labels in order; None = those that occur, sorted.
-    ordered : whether the labels are time, and so must sort as time; places do not.
+    unit : what the labels are, as messages call them; periods must sort as time.
 
     Raises
     ------
@@ -85,16 +98,16 @@ def to_arrays(
         raise MissingColumns("The panel", missing, frame.columns)
     for name in (price, *([] if value is None else [value])):
         if not frame.schema[name].is_numeric():
-            raise BadPanel(f"Column '{name}' of the panel holds {frame.schema[name]}, not numbers.")
+            raise BadPanel(_no_numbers(frame[name]))
     kept = frame.select(asked).filter(pl.col(price).is_not_null() & pl.col(price).cast(pl.Float64).is_not_nan())
     _check_keys(kept, [*identity, period])
-    if ordered:
+    if unit == "period":
         _check_periods(kept[period])
     _check_numbers(kept, price, [*identity, period], zero=False)
     if value is not None:
         _check_numbers(kept, value, [*identity, period], zero=True)
     labels = kept[period].unique().sort() if periods is None else periods
-    return _scatter(kept, list(by), identity, period, price, value, labels)
+    return _scatter(kept, list(by), identity, period, price, value, labels, unit)
 
 
 def _scatter(
@@ -105,16 +118,17 @@ def _scatter(
     price: str,
     value: str | None,
     labels: pl.Series,
+    unit: str,
 ) -> PanelArrays:
     kept, period_of = _number_periods(rows, period, labels)
     # One hash grouping finds the distinct products and their rows; only the distinct ones are sorted.
-    grouped = kept.select(identity).with_row_index("_row").group_by(identity).agg("_row").sort(identity)
+    grouped = kept.select(identity).with_row_index(_ROW).group_by(identity).agg(_ROW).sort(identity)
     products = grouped.select(identity)
-    order = grouped["_row"].explode(empty_as_null=False).to_numpy()
-    at = np.repeat(np.arange(products.height), grouped["_row"].list.len().to_numpy())
+    order = grouped[_ROW].explode(empty_as_null=False).to_numpy()
+    at = np.repeat(np.arange(products.height), grouped[_ROW].list.len().to_numpy())
     at += period_of[order].astype(np.int64) * products.height
     shape = (len(labels), products.height)
-    _check_once(at, order, shape[0] * shape[1], kept, identity)
+    _check_once(at, order, shape[0] * shape[1], kept, [*identity, period], unit)
 
     def spread(name: str) -> Array:
         flat = np.full(shape[0] * shape[1], np.nan)
@@ -129,8 +143,8 @@ def _scatter(
 
 def _number_periods(rows: pl.DataFrame, period: str, labels: pl.Series) -> tuple[pl.DataFrame, NDArray[np.uint32]]:
     """The rows whose period is among the labels, and its position for each of them."""
-    codes = pl.DataFrame({period: labels}).with_row_index("_t")
-    numbers = rows.select(period).join(codes, on=period, how="left", maintain_order="left")["_t"]
+    codes = pl.DataFrame({period: labels}).with_row_index(_ROW)
+    numbers = rows.select(period).join(codes, on=period, how="left", maintain_order="left")[_ROW]
     known = numbers.is_not_null()
     if known.all():
         return rows, numbers.to_numpy()
@@ -144,6 +158,20 @@ def _starts(rows: pl.DataFrame, columns: list[str]) -> NDArray[np.bool_]:
     for name in columns:
         starts |= rows[name].ne_missing(rows[name].shift(1)).to_numpy()
     return starts
+
+
+def _no_numbers(column: pl.Series) -> str:
+    """What to say of a column that should hold numbers."""
+    if column.is_empty():
+        return f"The panel has no rows (column '{column.name}' is empty)."
+    odd = column
+    if column.dtype == pl.String:
+        odd = column.filter(column.cast(pl.Float64, strict=False).is_null() & column.is_not_null())
+    example = f": '{odd[0]}' and {len(odd) - 1} more rows" if len(odd) else ""
+    return (
+        f"Column '{column.name}' of the panel holds {column.dtype}, not numbers{example}. Convert it, with "
+        "a decimal point, and leave unsold products empty."
+    )
 
 
 def _check_keys(rows: pl.DataFrame, columns: list[str]) -> None:
@@ -160,8 +188,9 @@ def _check_periods(periods: pl.Series) -> None:
     if periods.dtype != pl.String:
         return
     odd = periods.filter(~periods.str.contains(_SORTS_AS_TIME))
-    if not len(odd) and periods.str.len_chars().n_unique() > 1:
-        odd = periods.filter(periods.str.len_chars() != periods.str.len_chars()[0])
+    shapes = periods.str.replace_all(r"\d", "0")
+    if not len(odd) and shapes.n_unique() > 1:
+        odd = periods.filter(shapes != shapes[0])
     if len(odd):
         raise BadPanel(
             f"Column '{periods.name}' holds '{odd[0]}', and {len(odd)} of {len(periods)} rows like it. A period is a "
@@ -184,14 +213,14 @@ def _check_numbers(rows: pl.DataFrame, name: str, keys: list[str], *, zero: bool
 
 
 def _check_once(
-    at: NDArray[np.int64], order: NDArray[np.uint32], size: int, rows: pl.DataFrame, keys: list[str]
+    at: NDArray[np.int64], order: NDArray[np.uint32], size: int, rows: pl.DataFrame, keys: list[str], unit: str
 ) -> None:
     taken = np.bincount(at, minlength=size) if len(at) else np.zeros(0, dtype=np.int64)
     if (taken > 1).any():
         first = rows.row(int(order[taken[at] > 1].min()), named=True)
         example = ", ".join(f"{key} {first[key]}" for key in keys)
         raise BadPanel(
-            f"Products occur more than once in a period, {int((taken > 1).sum())} times (first: {example}). A panel "
-            "has one row per product and period: sum turnover and quantity to unit values first, or name the column "
+            f"Products occur more than once in a {unit}, {int((taken > 1).sum())} times (first: {example}). A panel "
+            f"has one row per product and {unit}: sum turnover and quantity to unit values first, or name the column "
             "that tells the rows apart with by."
         )

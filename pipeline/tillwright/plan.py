@@ -27,7 +27,7 @@ from tillwright.choices import (
     WeightFormula,
     WeightSource,
 )
-from tillwright.kernels.methods import Recipe
+from tillwright.kernels.recipes import Recipe
 from tillwright.periods import parse_period
 
 DATE_ROLES = ("sold_at", "week", "month")

@@ -11,8 +11,9 @@ from zoneinfo import ZoneInfo
 
 from pydantic import TypeAdapter, ValidationError
 
+from tillwright.choices import PeriodKind
 from tillwright.errors import PlanError, PlanProblem
-from tillwright.periods import parse_period, periods_a_year, year_of
+from tillwright.periods import parse_period, year_of
 from tillwright.plan import DATE_ROLES, Plan
 
 SECTIONS = tuple(name for name in Plan.model_fields if name != "source")
@@ -240,7 +241,7 @@ def _screening_problems(plan: Plan) -> Iterator[PlanProblem]:
 
 
 def _index_problems(plan: Plan) -> Iterator[PlanProblem]:
-    shortest = periods_a_year(plan.plan.period) + 1
+    shortest = _LONGEST_YEAR[plan.plan.period] + 1
     keys = [f"index.override.{number}" for number in range(len(plan.index.override))]
     recipes = [plan.index.overridden(), *(plan.index.overridden(override) for override in plan.index.override)]
     for key, recipe in zip(["index", *keys], recipes, strict=True):
@@ -253,6 +254,7 @@ def _index_problems(plan: Plan) -> Iterator[PlanProblem]:
             yield PlanProblem(f"{key}.window", str(recipe.window), allowed)
 
 
+_LONGEST_YEAR: dict[PeriodKind, int] = {"month": 12, "week": 53, "quarter": 4}
 _UNION_MEMBER = re.compile(r"^(constrained-|literal\[|tuple\[)")
 
 _CHECKS: dict[Callable[[Plan], Iterator[PlanProblem]], tuple[str, ...]] = {

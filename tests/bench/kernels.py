@@ -16,8 +16,9 @@ import tillwright as tw
 from tests.bench.measure import interleave, show
 from tests.grocery.builder import data_folder
 from tillwright.choices import MULTILATERAL_METHODS
-from tillwright.kernels.methods import Recipe, make_index, make_indexes
+from tillwright.kernels.methods import make_index, make_indexes
 from tillwright.kernels.pairs import Array
+from tillwright.kernels.recipes import Recipe
 from tillwright.panels import to_arrays
 
 PERIODS, PRODUCTS, LIFE, WINDOW, ROUNDS, GROUPS = 120, 20_000, 24, 25, 7, 50

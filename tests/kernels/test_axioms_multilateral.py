@@ -15,7 +15,8 @@ from numpy.typing import NDArray
 
 from tests.kernels import tolerances, twins, twins_windows
 from tests.kernels.panels import PROPERTY, floats, panels, powers_of_ten
-from tillwright.kernels.methods import Recipe, make_index
+from tillwright.kernels.methods import make_index
+from tillwright.kernels.recipes import Recipe
 
 Array = NDArray[np.float64]
 Sold = tuple[Array, Array]

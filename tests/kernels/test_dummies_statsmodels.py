@@ -7,7 +7,8 @@ from numpy.typing import NDArray
 
 from tests.kernels import twins_windows
 from tests.kernels.panels import Panel, random_panels
-from tillwright.kernels.methods import Recipe, make_index
+from tillwright.kernels.methods import make_index
+from tillwright.kernels.recipes import Recipe
 
 Array = NDArray[np.float64]
 REGRESSION = 1e-9

@@ -13,7 +13,8 @@ from tests.kernels.panels import PROPERTY, floats, random_panels
 from tests.reference.published import dataset
 from tillwright.errors import UnconnectedPeriods
 from tillwright.kernels import geary_khamis, time_product_dummy
-from tillwright.kernels.methods import Recipe, make_index
+from tillwright.kernels.methods import make_index
+from tillwright.kernels.recipes import Recipe
 from tillwright.kernels.windows import Windows
 
 Array = NDArray[np.float64]

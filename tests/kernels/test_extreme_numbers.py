@@ -18,7 +18,8 @@ from numpy.typing import NDArray
 from tests.kernels import twins_windows
 from tests.kernels.variants import FORMS, VARIANTS, Form, Onto, Splice
 from tillwright.choices import BILATERAL_FORMULAS
-from tillwright.kernels.methods import Recipe, make_index
+from tillwright.kernels.methods import make_index
+from tillwright.kernels.recipes import Recipe
 
 Array = NDArray[np.float64]
 Sold = tuple[Array, Array]

@@ -13,7 +13,8 @@ from tests.kernels import twins
 from tests.kernels.panels import Array, random_panel
 from tests.kernels.variants import FORMS, ONTO, SPLICES
 from tillwright.kernels.jackknife import standard_errors
-from tillwright.kernels.methods import Recipe, make_index, make_indexes
+from tillwright.kernels.methods import make_index, make_indexes
+from tillwright.kernels.recipes import Recipe
 
 ROUNDING = 1e-12
 """Sums of a few hundred terms below 10."""

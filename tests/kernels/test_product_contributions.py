@@ -17,8 +17,9 @@ from tests.kernels.panels import Array, Panel, random_panel
 from tests.kernels.variants import FORMS, ONTO, SPLICES
 from tests.reference.published import dataset
 from tillwright.errors import UnconnectedPeriods
-from tillwright.kernels.methods import Recipe, make_index
+from tillwright.kernels.methods import make_index
 from tillwright.kernels.product_contributions import decompose
+from tillwright.kernels.recipes import Recipe
 
 ADDS_UP = 1e-9
 """What the sum over products may miss of the movement: fixed points and least squares are solved to about 1e-12."""

@@ -16,7 +16,8 @@ from tests.kernels import tolerances
 from tests.kernels.variants import FORMS, ONTO, VARIANTS, Form, Onto, Splice
 from tests.reference.published import Case, cases, dataset
 from tillwright.kernels import bilateral
-from tillwright.kernels.methods import Recipe, make_index, make_indexes
+from tillwright.kernels.methods import make_index, make_indexes
+from tillwright.kernels.recipes import Recipe
 
 Array = NDArray[np.float64]
 

@@ -16,7 +16,8 @@ from tests.kernels.panels import Panel, random_panel, random_panels
 from tests.kernels.variants import FORMS, ONTO, VARIANTS, Form
 from tillwright.choices import BILATERAL_FORMULAS
 from tillwright.errors import CallError, UnconnectedPeriods
-from tillwright.kernels.methods import Recipe, make_index, make_indexes
+from tillwright.kernels.methods import make_index, make_indexes
+from tillwright.kernels.recipes import Recipe
 
 Array = NDArray[np.float64]
 T = TypeVar("T")

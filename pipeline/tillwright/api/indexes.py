@@ -3,23 +3,24 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 import polars as pl
 
 from tillwright.api.frames import Columns, check_choice, check_number, code, named
+from tillwright.api.levels import clusters_of, errors_of, jackknife, make_levels, reach_of
 from tillwright.api.recipes import FORMULAS, SETTINGS, Asked, ask, place_in_time, years_of
-from tillwright.api.replicates import jackknife
 from tillwright.choices import METHODS, MULTILATERAL_METHODS, UNCONNECTED, Form, Onto, Splice, Unconnected, Window
-from tillwright.errors import UnconnectedPeriods
-from tillwright.kernels.churn import count_by_segment
-from tillwright.kernels.methods import Failure, Years, make_indexes
+from tillwright.errors import BadPanel, CallError
+from tillwright.kernels.churn import SegmentCounts, count_by_segment
 from tillwright.kernels.pairs import Array, Positions
+from tillwright.kernels.recipes import Years
 from tillwright.panels import PanelArrays
 
 FIGURES = ("index", "products", "matched")
-ERRORS = ("standard_error", "change", "change_error")
+ERRORS = ("standard_error", "change", "change_error", "groups")
 
 
 def bilateral(
@@ -132,8 +133,8 @@ def indexes(
 ) -> pl.DataFrame:
     """Indexes of any methods side by side, the first period = 100, with standard errors where asked.
 
-    What combinations have in common is computed once; a combination in which an argument makes no
-    difference occurs once, with null for that argument.
+    What combinations have in common is computed once. A setting that does not apply to a method is null for it, and
+    makes no further combination.
 
     Parameters
     ----------
@@ -141,15 +142,17 @@ def indexes(
     method : one or a list of `tillwright.choices.METHODS`.
     window, splice, onto, link_month, unconnected : as for `multilateral`.
     groups : standard errors by a delete-a-group jackknife with this many random groups of products (at
-        least 2; as many as there are products where they are fewer).
-    over : a column, such as the outlet, whose values are grouped instead. It becomes part of what makes
-        a product, so that prices are compared within it.
+        least 2; as many as there are products where they are fewer). With few groups the errors are themselves
+        uncertain, so ask for 20 or more.
+    over : with `groups`, a column such as the outlet, whose values are left out instead of products. It becomes part
+        of what makes a product, so that prices are compared within it.
 
     Returns
     -------
     As for `bilateral`; with `groups` also `standard_error` of the index, `change` on the period before
-    in per cent and `change_error` in percentage points, missing where an index cannot be made without
-    some group.
+    in per cent, `change_error` in percentage points, and `groups` as used. Errors are missing where an index cannot be
+    made without some group. Those of "tpd" are made with the weights of the full panel
+    (`tillwright.kernels.time_product_dummy`), those of all others as if what is left out had not been there.
 
     Raises
     ------
@@ -157,6 +160,8 @@ def indexes(
 
     Reference: those of `bilateral` and `multilateral`; `tillwright.kernels.jackknife`.
     """
+    if over is not None and groups is None:
+        raise CallError("over says what is left out for standard errors, and groups how many times: give both.")
     if groups is not None:
         check_number("groups", groups, 2)
     asked = ask(method, METHODS, form=form, window=window, splice=splice, onto=onto)
@@ -172,6 +177,84 @@ def indexes(
     )
 
 
+def replicates(
+    frame: Any,
+    method: str | Sequence[str],
+    *,
+    groups: int,
+    over: str | None = None,
+    form: Form | Sequence[Form] = "chained",
+    window: Window | Sequence[Window | None] | None = None,
+    splice: Splice | Sequence[Splice] = "mean",
+    onto: Onto | Sequence[Onto] = "published",
+    weight_period: Any = None,
+    link_month: int = 12,
+    by: str | Sequence[str] | None = None,
+    period: str = "period",
+    product: str = "product",
+    price: str = "price",
+    quantity: str = "quantity",
+) -> pl.DataFrame:
+    """Index without each of so many groups of products or outlets: what the errors of `indexes` are made of.
+
+    For standard errors of anything made of indexes, such as a change over a year or the gap between two methods:
+    make it of each replicate θ_g, then √((G − 1)/G · Σ (θ_g − mean θ)²).
+
+    Parameters
+    ----------
+    As for `indexes`.
+
+    Returns
+    -------
+    The `by` columns, a column for each setting given as a list, `without` (the number of the group left out, from 1),
+    `period` and `index`, missing where it cannot be made.
+
+    Raises
+    ------
+    CallError, BadPanel, MissingColumns
+
+    Reference: `tillwright.kernels.jackknife`.
+    """
+    check_number("groups", groups, 2)
+    asked = ask(method, METHODS, form=form, window=window, splice=splice, onto=onto)
+    columns = named(by, period, product, price, quantity, over=over)
+    ready = _prepare(frame, asked, columns, weight_period, link_month, ("without", *SETTINGS, *FIGURES))
+    parts = []
+    clusters = clusters_of(ready.arrays, over)
+    for group, left_out, levels in jackknife(ready.arrays, ready.asked, ready.years, ready.reach, clusters, groups):
+        first, last = ready.reach[group]
+        recipe, without, time = (axis.ravel() for axis in np.indices((*levels.shape[:2], last + 1 - first)))
+        made = {"without": left_out[without] + 1, period: ready.arrays.periods[first + time]}
+        parts.append(
+            _framed(ready, np.full(len(time), group), recipe, {**made, "index": levels[recipe, without, first + time]})
+        )
+    if not parts:
+        raise BadPanel("Nothing can be left out: every group has one product, or one value of over.")
+    return pl.concat(parts)
+
+
+@dataclass(frozen=True, slots=True)
+class _Ready:
+    """A panel coded for the recipes of a call."""
+
+    arrays: PanelArrays
+    asked: Asked
+    years: Years | None
+    counts: SegmentCounts
+    reach: Positions
+
+
+def _prepare(
+    frame: Any, asked: Asked, columns: Columns, weight_period: Any, link_month: int, result: Sequence[str]
+) -> _Ready:
+    weighed = any(recipe.needs_quantities for recipe in asked.recipes)
+    arrays = code(frame, columns, quantities=weighed, result=result)
+    asked = place_in_time(asked, arrays.periods, weight_period, link_month)
+    years = years_of(asked, arrays.periods, link_month)
+    counts = count_by_segment(arrays.prices, arrays.starts)
+    return _Ready(arrays, asked, years, counts, reach_of(counts.products))
+
+
 def _compile(
     frame: Any,
     asked: Asked,
@@ -183,102 +266,32 @@ def _compile(
     groups: int | None = None,
 ) -> pl.DataFrame:
     check_choice("unconnected", unconnected, UNCONNECTED)
-    weighed = any(recipe.needs_quantities for recipe in asked.recipes)
     result = (*SETTINGS, *FIGURES, *(ERRORS if groups else ()))
-    arrays = code(frame, columns, quantities=weighed, result=result)
-    asked = place_in_time(asked, arrays.periods, weight_period, link_month)
-    years = years_of(asked, arrays.periods, link_month)
-    counts = count_by_segment(arrays.prices, arrays.starts)
-    reach = _reach(counts.products)
-    levels = 100.0 * make_levels(arrays, asked, years, reach, blank=unconnected == "blank")
+    ready = _prepare(frame, asked, columns, weight_period, link_month, result)
+    panel = (ready.arrays, ready.asked, ready.years, ready.reach)
+    levels = make_levels(*panel, blank=unconnected == "blank")
     figures = {"index": levels}
     if groups:
-        figures |= jackknife(arrays, asked, years, reach, levels, groups, over=columns.over)
-    return _tidy(arrays, asked, reach, figures, {"products": counts.products, "matched": counts.matched}).rename(
-        {"_period": columns.period}
-    )
+        figures |= errors_of(*panel, levels, clusters_of(ready.arrays, columns.over), groups)
+    return _tidy(ready, columns.period, figures)
 
 
-def _reach(products: np.ndarray) -> Positions:
-    """(B, 2) first and last period with a product of each group."""
-    sold = products > 0
-    return np.stack([sold.argmax(axis=1), sold.shape[1] - 1 - sold[:, ::-1].argmax(axis=1)], axis=1)
-
-
-def make_levels(arrays: PanelArrays, asked: Asked, years: Years | None, reach: Positions, *, blank: bool) -> Array:
-    """(R, B, T) levels, base 1; windows of a group begin with its first period.
-
-    Groups that begin and end in the same periods are compiled together.
-    """
-    levels = np.full((len(asked.recipes), *reach.shape[:1], len(arrays.periods)), np.nan)
-    rolling = [recipe.is_spliced and recipe.window != "expanding" for recipe in asked.recipes]
-    # Rolling windows begin where a group does; nothing else depends on empty periods around it.
-    bounds = {True: reach, False: np.broadcast_to([0, len(arrays.periods) - 1], reach.shape)}
-    for kind, span in bounds.items():
-        positions = [at for at, rolls in enumerate(rolling) if rolls == kind]
-        if not positions:
-            continue
-        recipes = [asked.recipes[at] for at in positions]
-        for first, last in np.unique(span, axis=0):
-            members = np.flatnonzero((span == (first, last)).all(axis=1))
-            prices, values, starts = _part(arrays, members, slice(first, last + 1))
-            failures: list[Failure] = []
-            made = make_indexes(
-                prices,
-                values,
-                recipes,
-                segments=starts,
-                years=None if years is None else years[first : last + 1],
-                failures=failures,
-            )
-            if failures and not blank:
-                raise _labelled(failures[0].reason, arrays, int(members[failures[0].segment]), int(first))
-            levels[np.ix_(np.array(positions), members, np.arange(first, last + 1))] = made
-    return levels
-
-
-def _part(arrays: PanelArrays, members: Positions, cut: slice) -> tuple[Array, Array | None, Positions]:
-    """Prices, quantities and first columns of some groups over some periods."""
-    ends = np.append(arrays.starts[1:], arrays.prices.shape[1])
-    if len(members) == len(arrays.starts):
-        return arrays.prices[cut], None if arrays.values is None else arrays.values[cut], arrays.starts
-    sizes = (ends - arrays.starts)[members]
-    starts = np.cumsum(sizes) - sizes
-    columns = np.concatenate([np.arange(arrays.starts[at], ends[at]) for at in members])
-    values = None if arrays.values is None else arrays.values[cut][:, columns]
-    return arrays.prices[cut][:, columns], values, starts
-
-
-def _labelled(problem: UnconnectedPeriods, arrays: PanelArrays, group: int, first: int) -> UnconnectedPeriods:
-    """The error with the labels of its periods and the group named."""
-    names = arrays.keys.row(group, named=True) if arrays.keys.width else {}
-    where = ", ".join(f"{name} {value}" for name, value in names.items())
-    return problem.labelled(arrays.periods.to_list()[first:], where)
-
-
-def _tidy(
-    arrays: PanelArrays,
-    asked: Asked,
-    reach: Positions,
-    figures: dict[str, Array],
-    counts: dict[str, np.ndarray],
-) -> pl.DataFrame:
+def _tidy(ready: _Ready, period: str, figures: dict[str, Array]) -> pl.DataFrame:
     """One row per group, recipe and period from the group's first to its last."""
-    recipes, periods = len(asked.recipes), np.arange(len(arrays.periods))
-    inside = (periods >= reach[:, :1]) & (periods <= reach[:, 1:])
-    shape = (len(reach), recipes, len(periods))
-    group, recipe, period = np.nonzero(np.broadcast_to(inside[:, None], shape))
-    parts = [] if not arrays.keys.width else [arrays.keys[group]]
-    if asked.shown:
-        parts.append(asked.describe()[recipe])
-    parts.append(pl.DataFrame({"_period": arrays.periods[period]}))
-    made = {"index": figures["index"], **counts, **{name: value for name, value in figures.items() if name != "index"}}
-    parts.append(
-        pl.DataFrame(
-            {
-                name: value[group, period] if name in counts else value[recipe, group, period]
-                for name, value in made.items()
-            }
-        ).with_columns(pl.col(pl.Float64).fill_nan(None))
-    )
-    return pl.concat(parts, how="horizontal")
+    periods = np.arange(len(ready.arrays.periods))
+    inside = (periods >= ready.reach[:, :1]) & (periods <= ready.reach[:, 1:])
+    shape = (len(ready.reach), len(ready.asked.recipes), len(periods))
+    group, recipe, time = np.nonzero(np.broadcast_to(inside[:, None], shape))
+    index, *others = ({name: value[recipe, group, time]} for name, value in figures.items())
+    counts = {"products": ready.counts.products[group, time], "matched": ready.counts.matched[group, time]}
+    made = {period: ready.arrays.periods[time], **index, **counts}
+    for other in others:
+        made |= other
+    return _framed(ready, group, recipe, made)
+
+
+def _framed(ready: _Ready, group: Positions, recipe: Positions, made: dict[str, Any]) -> pl.DataFrame:
+    """The columns made, after those of the groups and of the settings shown; NaN as missing."""
+    parts = [ready.arrays.keys[group]] if ready.arrays.keys.width else []
+    parts += [ready.asked.describe()[recipe]] if ready.asked.shown else []
+    return pl.concat([*parts, pl.DataFrame(made).with_columns(pl.col(pl.Float64).fill_nan(None))], how="horizontal")

@@ -3,8 +3,9 @@
 from __future__ import annotations
 
 import itertools
-from collections.abc import Sequence
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
+from numbers import Integral
 from typing import Any
 
 import numpy as np
@@ -23,11 +24,12 @@ from tillwright.choices import (
     Window,
 )
 from tillwright.errors import CallError
-from tillwright.kernels.methods import Recipe, Years
+from tillwright.kernels.recipes import Recipe, Years
 from tillwright.periods import link_years
 
 FORMULAS = (*BILATERAL_FORMULAS, *BASE_WEIGHTED_FORMULAS)
 SETTINGS = ("method", "form", "window", "splice", "onto")
+WINDOW_WORDS = ("all", "expanding")
 OneOrMore = Sequence[Any] | Any
 
 
@@ -39,15 +41,9 @@ class Asked:
     shown: list[str]
 
     def describe(self) -> pl.DataFrame:
-        """One row per recipe with the settings shown; null where one does not apply."""
+        """One row per recipe with the settings shown, as text; null where one does not apply."""
         rows = [_settings(recipe) for recipe in self.recipes]
-        numbers = all(not isinstance(row["window"], str) for row in rows)
-        kinds = {"window": pl.Int64 if numbers else pl.String}
-        columns = {
-            name: pl.Series([_as(row[name], numbers=numbers) for row in rows], dtype=kinds.get(name, pl.String))
-            for name in self.shown
-        }
-        return pl.DataFrame(columns)
+        return pl.DataFrame({name: pl.Series([row[name] for row in rows], dtype=pl.String) for name in self.shown})
 
 
 def ask(
@@ -76,9 +72,12 @@ def ask(
             check_choice(key, value, choices)
     for value in lists["window"]:
         _check_window(value)
+    lists["window"] = [None if value == "all" else value for value in lists["window"]]
+    if "expanding" in lists["window"] and "link-month" not in lists["splice"]:
+        raise CallError(f"window 'expanding' takes the splice 'link-month'; splice is '{lists['splice'][0]}'.")
     recipes = (_recipe(*values) for values in itertools.product(*lists.values()))
     return Asked(
-        list(dict.fromkeys(recipe for recipe in recipes if recipe is not None)) or _nothing(lists),
+        list(dict.fromkeys(recipe for recipe in recipes if recipe is not None)),
         [shown for shown, value in zip(SETTINGS, given.values(), strict=True) if _is_list(value)],
     )
 
@@ -122,17 +121,17 @@ def years_of(asked: Asked, periods: pl.Series, link_month: int) -> Years | None:
     return np.array(years, dtype=np.int64)
 
 
-def _recipe(method: str, form: Form, window: Window | None, splice: Splice, onto: Onto) -> Recipe | None:
+def _recipe(method: str, form: Form, window: Any, splice: Splice, onto: Onto) -> Recipe | None:
     """The recipe with what does not apply at its default; None where the settings exclude each other."""
     if method in FORMULAS:
         return Recipe(method, form=form)
     if method == "similarity":
-        return Recipe(method, window=None if window == "expanding" else window)
+        return Recipe(method, window=None if window in {None, "expanding"} else int(window))
     if window is None:
         return Recipe(method)
     if window == "expanding":
         return Recipe(method, window=window, splice=splice) if splice == "link-month" else None
-    return Recipe(method, window=window, splice=splice, onto="published" if splice == "link-month" else onto)
+    return Recipe(method, window=int(window), splice=splice, onto="published" if splice == "link-month" else onto)
 
 
 def _settings(recipe: Recipe) -> dict[str, Any]:
@@ -141,7 +140,7 @@ def _settings(recipe: Recipe) -> dict[str, Any]:
     return {
         "method": recipe.method,
         "form": recipe.form if recipe.is_bilateral else None,
-        "window": None if recipe.is_bilateral else recipe.window,
+        "window": None if recipe.is_bilateral else str(recipe.window or "all"),
         "splice": recipe.splice if recipe.is_spliced else None,
         "onto": recipe.onto if linked else None,
     }
@@ -153,22 +152,15 @@ def _weighted(recipe: Recipe, positions: tuple[int, ...]) -> Recipe:
     return Recipe(recipe.method, form=recipe.form, weight_periods=positions)
 
 
-def _check_window(window: object) -> None:
-    if window is None or window == "expanding":
+def _check_window(window: Any) -> None:
+    if window is None or (isinstance(window, str) and window in WINDOW_WORDS):
         return
-    if not isinstance(window, int) or isinstance(window, bool) or window < 2:
+    whole = isinstance(window, Integral) and not isinstance(window, bool)
+    if not whole or int(window) < 2:
         raise CallError(
-            f"window is {window}; allowed: a number of periods, at least 2, 'expanding', or None for one over all."
+            f"window is {window}; allowed: a number of periods, at least 2, 'expanding', or 'all' for one over all."
         )
 
 
-def _nothing(lists: dict[str, list[Any]]) -> list[Recipe]:
-    raise CallError(f"window 'expanding' takes the splice 'link-month'; splice is '{lists['splice'][0]}'.")
-
-
-def _as(value: object, *, numbers: bool) -> object:
-    return value if numbers or value is None else str(value)
-
-
 def _is_list(value: object) -> bool:
-    return not isinstance(value, str) and isinstance(value, Sequence | pl.Series)
+    return not isinstance(value, str) and isinstance(value, Iterable)

@@ -60,7 +60,14 @@ _roles = _together(
     click.option("--json", "as_json", is_flag=True, help="Tell what was written as JSON."),
 )
 _period = click.option(
-    "--period", default="period", show_default=True, metavar="COLUMN", help="Date, YYYY-MM or integer."
+    "--period", default="period", show_default=True, metavar="COLUMN", help="Date, 2024-03, 2024-W07 or integer."
+)
+_unconnected = click.option(
+    "--unconnected",
+    type=click.Choice(UNCONNECTED),
+    default="refuse",
+    show_default=True,
+    help="What shares no chain of products: refuse to go on, or leave it blank.",
 )
 _groups = click.option(
     "--groups",
@@ -69,84 +76,72 @@ _groups = click.option(
 )
 
 
-def _settings(*, several: bool) -> Decorator:
-    """How an index is made; each option may be repeated where several are taken."""
-    again = " May be repeated." if several else ""
-
-    def choose(name: str, choices: Sequence[str], default: str, text: str) -> Decorator:
-        return click.option(
-            name,
-            type=click.Choice(choices),
-            default=[default] if several else default,
-            show_default=True,
-            multiple=several,
-            help=text + again,
-        )
-
-    return _together(
-        click.option(
-            "--method",
-            type=click.Choice(METHODS),
-            required=True,
-            multiple=several,
-            help="Formula or multilateral method." + again,
-        ),
-        click.option(
-            "--window",
-            type=WindowLength(),
-            multiple=several,
-            help=f"Periods in a window, expanding (from the last link month on), or all.{again}  [default: all]",
-        ),
-        choose("--splice", SPLICES, "mean", "Link of later windows."),
-        choose("--onto", ONTO, "published", "Series that windows are linked onto."),
-        choose("--form", FORMS, "chained", "Form of bilateral formulas."),
-        click.option(
-            "--weight-period",
-            multiple=True,
-            metavar="PERIOD",
-            help="Period that gives lowe, young and geometric-young their weights; several are added up.",
-        ),
-        click.option(
-            "--link-month",
-            type=click.IntRange(1, 12),
-            default=12,
-            show_default=True,
-            help="Month that a year ends in, for --splice link-month.",
-        ),
+def _choose(name: str, choices: Sequence[str], default: str, text: str) -> Decorator:
+    return click.option(
+        name,
+        type=click.Choice(choices),
+        default=[default],
+        show_default=True,
+        multiple=True,
+        help=text + " May be repeated.",
     )
+
+
+_settings = _together(
+    click.option(
+        "--method",
+        type=click.Choice(METHODS),
+        required=True,
+        multiple=True,
+        help="Formula or multilateral method. May be repeated.",
+    ),
+    click.option(
+        "--window",
+        type=WindowLength(),
+        multiple=True,
+        help="Periods in a window, expanding (from the last link month on), or all. May be repeated.  [default: all]",
+    ),
+    _choose("--splice", SPLICES, "mean", "Link of later windows (half: t−⌊W/2⌋)."),
+    _choose("--onto", ONTO, "published", "Series that windows are linked onto."),
+    _choose("--form", FORMS, "chained", "Form of bilateral formulas."),
+    click.option(
+        "--weight-period",
+        multiple=True,
+        metavar="PERIOD",
+        help="Period that gives lowe, young and geometric-young their weights; several are added up.",
+    ),
+    click.option(
+        "--link-month",
+        type=click.IntRange(1, 12),
+        default=12,
+        show_default=True,
+        help="Month that a year ends in, for --splice link-month.",
+    ),
+    _unconnected,
+)
 
 
 @click.command("index")
 @_panel
-@_settings(several=True)
+@_settings
 @_output
 @_groups
-@click.option("--over", metavar="COLUMN", help="Group the values of this column, such as the outlet, instead.")
 @click.option(
-    "--unconnected",
-    type=click.Choice(UNCONNECTED),
-    default="refuse",
-    show_default=True,
-    help="What to do where the periods of a window share no products.",
+    "--over",
+    metavar="COLUMN",
+    help="With --groups: leave out values of this column, such as outlets, instead; prices are compared within them.",
 )
 @_period
 @_roles
 def index_command(
     panel: Path,
     method: tuple[str, ...],
-    window: tuple[Any, ...],
-    splice: tuple[Any, ...],
-    onto: tuple[Any, ...],
-    form: tuple[Any, ...],
-    weight_period: tuple[str, ...],
-    link_month: int,
     out: Path,
     by: tuple[str, ...],
     groups: int | None,
     over: str | None,
-    unconnected: Unconnected,
     as_json: bool,
-    **columns: str,
+    **settings: Any,
 ) -> int:
     """Indexes straight from a panel file (Parquet or CSV), one row per product and period.
 
@@ -160,25 +155,12 @@ def index_command(
     from tillwright.api.indexes import indexes
 
     _check_ending(out)
-    codes = (*by, columns["product"], *([over] if over else []))
-    result = indexes(
-        _read_panel(panel, codes),
-        _one_or_more(method),
-        form=_one_or_more(form),
-        window=_one_or_more(window) if window else None,
-        splice=_one_or_more(splice),
-        onto=_one_or_more(onto),
-        weight_period=list(weight_period) or None,
-        link_month=link_month,
-        unconnected=unconnected,
-        groups=groups,
-        over=over,
-        by=by,
-        **columns,
-    )
-    settings = [name for name in ("method", "form", "window", "splice", "onto") if name in result.columns]
-    series = result.select(*by, *settings).n_unique() if by or settings else 1
-    _write(result, out, as_json=as_json, method=_one_or_more(method), series=series)
+    frame = _read_panel(panel, (*by, settings["product"], *([over] if over else [])))
+    result = indexes(frame, _one_or_more(method), groups=groups, over=over, by=by, **_passed_on(settings))
+    told = [name for name in ("method", "form", "window", "splice", "onto") if name in result.columns]
+    series = result.select(*by, *told).n_unique() if by or told else 1
+    facts = {"series": series, "empty": result["index"].null_count()}
+    _write(result, out, as_json=as_json, method=_one_or_more(method), **facts)
     return 0
 
 
@@ -188,19 +170,26 @@ def index_command(
     "--method", type=click.Choice(PLACE_METHODS), required=True, multiple=True, help="Method. May be repeated."
 )
 @click.option("--place", default="region", show_default=True, metavar="COLUMN", help="Column of the places.")
-@click.option("--base", metavar="PLACE", help="Place that is 100.  [default: the geometric mean of all]")
+@click.option(
+    "--base",
+    multiple=True,
+    metavar="PLACE",
+    help="Place that is 100; of several, their geometric mean.  [default: all places]",
+)
 @_output
 @_groups
+@_unconnected
 @_roles
 def places_command(
     panel: Path,
     method: tuple[str, ...],
     place: str,
-    base: str | None,
+    base: tuple[str, ...],
     out: Path,
     by: tuple[str, ...],
     groups: int | None,
     as_json: bool,
+    unconnected: Unconnected,
     **columns: str,
 ) -> int:
     """Price levels of places, such as regions or outlets, from a file with one row per product and place.
@@ -216,8 +205,18 @@ def places_command(
 
     _check_ending(out)
     frame = _read_panel(panel, (*by, place, columns["product"]))
-    result = place_levels(frame, _one_or_more(method), place=place, base=base, groups=groups, by=by, **columns)
-    _write(result, out, as_json=as_json, method=_one_or_more(method), places=result[place].n_unique())
+    result = place_levels(
+        frame,
+        _one_or_more(method),
+        place=place,
+        base=list(base) or None,
+        groups=groups,
+        unconnected=unconnected,
+        by=by,
+        **columns,
+    )
+    facts = {"places": result[place].n_unique(), "empty": result["level"].null_count()}
+    _write(result, out, as_json=as_json, method=_one_or_more(method), **facts)
     return 0
 
 
@@ -225,7 +224,7 @@ def places_command(
 @_panel
 @click.argument("start")
 @click.argument("end")
-@_settings(several=False)
+@_settings
 @_output
 @_period
 @_roles
@@ -233,8 +232,7 @@ def contributions_command(
     panel: Path,
     start: str,
     end: str,
-    method: str,
-    weight_period: tuple[str, ...],
+    method: tuple[str, ...],
     out: Path,
     by: tuple[str, ...],
     as_json: bool,
@@ -242,8 +240,9 @@ def contributions_command(
 ) -> int:
     """What each product contributes to the change of an index from period START to END.
 
-    Writes the --by columns, the product, its status (continuing, entering, exiting, between, or splice for what linking
-    windows moved) and its contribution in percentage points; they add up to the change exactly.
+    Writes the --by columns, the product, its status (continuing, entering, exiting, neither, or splice for what linking
+    windows moved), its contribution in percentage points, and its price and share of turnover in both periods.
+    Contributions add up to the change exactly.
 
     \b
     Example:
@@ -253,15 +252,27 @@ def contributions_command(
 
     _check_ending(out)
     frame = _read_panel(panel, (*by, settings["product"]))
-    weights = list(weight_period) or None
-    result = contributions(frame, method, start, end, weight_period=weights, by=by, **settings)
-    _write(result, out, as_json=as_json, method=method, start=start, end=end)
+    result = contributions(frame, _one_or_more(method), start, end, by=by, **_passed_on(settings))
+    missing = result.filter(result["status"] == "missing").height
+    _write(result, out, as_json=as_json, method=_one_or_more(method), start=start, end=end, missing=missing)
     return 0
 
 
 def _one_or_more(values: Sequence[Any]) -> Any:
     """A single value by itself, which adds no column to the result."""
     return values[0] if len(values) == 1 else list(values)
+
+
+def _passed_on(settings: dict[str, Any]) -> dict[str, Any]:
+    """The settings of an index as the functions take them."""
+    passed = {
+        name: _one_or_more(value) if name in {"form", "window", "splice", "onto"} else value
+        for name, value in settings.items()
+    }
+    return passed | {
+        "window": _one_or_more(settings["window"]) if settings["window"] else None,
+        "weight_period": list(settings["weight_period"]) or None,
+    }
 
 
 def _check_ending(out: Path) -> None:
@@ -277,7 +288,8 @@ def _write(result: pl.DataFrame, out: Path, *, as_json: bool, method: str | list
         click.echo(json.dumps({"out": str(out), "method": method, **facts, "rows": result.height}))
         return
     named = method if isinstance(method, str) else ", ".join(method)
-    counted = "".join(f"{value} {name}, " for name, value in facts.items() if name in {"series", "places"})
+    words = {"series": "series", "places": "places", "empty": "levels empty", "missing": "groups missing"}
+    counted = "".join(f"{facts[name]} {word}, " for name, word in words.items() if facts.get(name))
     click.echo(f"{out}: {named}, {counted}{result.height} rows.")
 
 

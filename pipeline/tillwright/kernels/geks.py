@@ -46,7 +46,7 @@ def window_levels(log_pairs: Array, windows: Windows, *, apart: list[Unconnected
     for row in np.flatnonzero(incomplete.any(axis=0)):
         members = np.flatnonzero(incomplete[:, row])
         present, linked = _what_exists(matrices[members, row], covered[row])
-        settle(linked, present, int(row) - windows.before, apart, members)
+        present[settle(linked, present, int(row) - windows.before, apart, members)] = False
         levels[members, row] = _fit_incomplete(matrices[members, row], linked, present)
     return anchor(levels).reshape(*log_pairs.shape[:-2], *levels.shape[1:])
 

@@ -7,6 +7,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
+from tillwright.kernels.means import logarithmic_mean, shares
 from tillwright.kernels.pairs import Array, Positions
 from tillwright.kernels.sato_vartia import weigh
 
@@ -90,22 +91,9 @@ def contribute(
 def ratio_parts(above: Array, below: Array) -> Array:
     """(…, n) parts of ln(Σ above / Σ below): (above − below) / L(Σ above, Σ below)."""
     total_above, total_below = above.sum(axis=-1, keepdims=True), below.sum(axis=-1, keepdims=True)
-    known = (total_above > 0) & (total_below > 0)
-    mean = logarithmic_mean(np.where(known, total_above, 1.0), np.where(known, total_below, 1.0))
-    return np.where(known, (above - below) / mean, 0.0)
-
-
-def logarithmic_mean(a: Array, b: Array) -> Array:
-    """(a − b) / ln(a/b) of positive numbers, a where they are equal."""
-    gap = np.log(a) - np.log(b)
-    with np.errstate(divide="ignore", invalid="ignore"):
-        return np.where(np.abs(gap) > 0, b * np.expm1(gap) / gap, a)
-
-
-def _shares(values: Array) -> Array:
-    totals = values.sum(axis=-1, keepdims=True)
-    shares: Array = values / np.where(totals > 0, totals, 1.0)
-    return shares
+    mean = logarithmic_mean(total_above, total_below)
+    parts: Array = (above - below) / np.where(mean > 0, mean, 1.0)
+    return parts
 
 
 def _carli(link: Link) -> Array:
@@ -129,7 +117,7 @@ def _baskets(link: Link, basket: Array) -> Array:
 
 
 def _geometric(link: Link, values: Array) -> Array:
-    return _shares(values) * link.logs
+    return shares(values) * link.logs
 
 
 def _arithmetic(link: Link, values: Array) -> Array:
@@ -159,9 +147,9 @@ _PARTS: dict[str, Callable[[Link], Array]] = {
     "geometric-laspeyres": lambda link: _geometric(link, link.p0 * link.q0),
     "geometric-paasche": lambda link: _geometric(link, link.p1 * link.q1),
     "tornqvist": _tornqvist,
-    "palgrave": lambda link: _arithmetic(link, _shares(link.p1 * link.q1)),
+    "palgrave": lambda link: _arithmetic(link, shares(link.p1 * link.q1)),
     "sato-vartia": lambda link: weigh(link.p0 * link.q0, link.p1 * link.q1) * link.logs,
     "lowe": lambda link: _baskets(link, _own_weights(link)),
-    "young": lambda link: _arithmetic(link, _shares(_own_weights(link))),
+    "young": lambda link: _arithmetic(link, shares(_own_weights(link))),
     "geometric-young": lambda link: _geometric(link, _own_weights(link)),
 }

@@ -3,76 +3,33 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Iterable, Sequence
-from dataclasses import dataclass
-from typing import Literal, TypeAlias
+from dataclasses import dataclass, replace
 
 import numpy as np
-from numpy.typing import NDArray
 
-from tillwright.errors import CallError, UnconnectedPeriods
+from tillwright.errors import UnconnectedPeriods
 from tillwright.kernels import geary_khamis, geks, similarity, time_product_dummy
 from tillwright.kernels.bilateral import logs_of_pairs, series_of_segments
-from tillwright.kernels.formulas import BASE_WEIGHTED, BILATERAL, PRICES_ONLY, SATO_VARTIA, wanted_pairs
-from tillwright.kernels.pairs import Array, Pair, PairSum, Positions, sum_all_pairs
+from tillwright.kernels.formulas import BASE_WEIGHTED, PRICES_ONLY, SATO_VARTIA, wanted_pairs
+from tillwright.kernels.pairs import Array, Pair, PairSum, Positions, sum_all_pairs, sum_others, sum_segments
+from tillwright.kernels.recipes import (
+    Recipe,
+    Years,
+    known,
+    links_of,
+    period_weights,
+    window_length,
+    windows_of,
+)
 from tillwright.kernels.splicing import splice
-from tillwright.kernels.windows import Windows
 
-Years: TypeAlias = NDArray[np.int64]
-
-
-@dataclass(frozen=True, slots=True)
-class Recipe:
-    """What an index is made by; fields that a method does not use are ignored.
-
-    `window` counts periods, None = one window over all of them, "expanding" = from the last link month
-    on. `weight_periods` are the positions of the periods that give formulas with weights of their own
-    those weights.
-    """
-
-    method: str
-    form: Literal["chained", "direct"] = "chained"
-    window: int | Literal["expanding"] | None = None
-    splice: Literal["movement", "window", "half", "mean", "link-month"] = "mean"
-    onto: Literal["published", "recalculated"] = "published"
-    weight_periods: tuple[int, ...] = ()
-
-    @property
-    def needs_quantities(self) -> bool:
-        """Whether the method weighs products."""
-        return self.method.removeprefix("geks-") not in PRICES_ONLY | {"tpd-unweighted"}
-
-    @property
-    def is_bilateral(self) -> bool:
-        """Whether the method compares two periods at a time, without windows."""
-        return self.method in BILATERAL
-
-    @property
-    def is_spliced(self) -> bool:
-        """Whether windows are linked into a series."""
-        return not self.is_bilateral and self.window is not None and self.method != "similarity"
-
-    @property
-    def needs_years(self) -> bool:
-        """Whether link months have to be known."""
-        return self.is_spliced and self.splice == "link-month"
-
-    def __str__(self) -> str:
-        if self.is_bilateral:
-            return f"{self.method}, {self.form}"
-        if self.window is None:
-            return f"{self.method}, one window"
-        if self.method == "similarity":
-            return f"{self.method}, window {self.window}"
-        if self.window == "expanding":
-            return f"{self.method}, window expanding from the link month"
-        if self.splice == "link-month":
-            return f"{self.method}, window {self.window}, linked on the link month"
-        return f"{self.method}, window {self.window}, {self.splice} splice onto {self.onto}"
+# Matrices over all pairs of periods are made for so many numbers (8 MB) at a time.
+HELD = 1 << 20
 
 
 @dataclass(frozen=True, slots=True)
 class Failure:
-    """A recipe that has no index in a segment, both by position, and why."""
+    """A recipe with windows that fall apart in a segment, both by position, and the first of them."""
 
     recipe: int
     segment: int
@@ -118,27 +75,93 @@ def make_indexes(
     Parameters
     ----------
     prices, quantities, years : as for `make_index`.
-    segments : (B,) ascending first columns of the segments, each a panel of its own; None = one.
+    segments : (B,) first columns of the segments, each a panel of its own and none empty; None = one.
     leave_out : instead, entry b is the index on all columns but those of segment b: the replicates of a
         delete-a-group jackknife. See `kernels.time_product_dummy` for what its weights are then.
-    failures : collects recipes and segments with a window that falls apart, whose index is NaN then;
-        None = raise.
+    failures : collects recipes and segments with windows that fall apart, with the first of them; such
+        windows are passed over, and levels that come from no other are NaN. None = raise.
 
     Raises
     ------
     UnconnectedPeriods, CallError : as for `make_index`.
     """
     starts = np.zeros(1, dtype=np.intp) if segments is None else segments
-    result = np.full((len(recipes), len(starts), len(prices)), np.nan)
-    compilers = (
-        (_bilateral, [at for at, recipe in enumerate(recipes) if recipe.is_bilateral]),
-        (_multilateral, [at for at, recipe in enumerate(recipes) if not recipe.is_bilateral]),
-    )
-    panel = _Panel(prices, quantities, starts, leave_out, years)
-    for compile_, positions in compilers:
-        if positions:
-            compile_(panel, [recipes[at] for at in positions], positions, result, failures)
+    panel = _Panel(prices, quantities, starts, leave_out, None)
+    many = max(HELD // max(len(prices), 1) ** 2, 1)
+    if leave_out or len(starts) <= many:
+        return _compile(panel, recipes, years, failures)
+    parts = []
+    for low in range(0, len(starts), many):
+        found: list[Failure] | None = None if failures is None else []
+        members = np.arange(low, min(low + many, len(starts)))
+        parts.append(_compile(panel.part(members), recipes, years, found))
+        for failure in found or ():
+            failures.append(replace(failure, segment=low + failure.segment))  # type: ignore[union-attr]
+    return np.concatenate(parts, axis=1)
+
+
+def _compile(panel: _Panel, recipes: Sequence[Recipe], years: Years | None, failures: list[Failure] | None) -> Array:
+    result = np.full((len(recipes), len(panel.segments), len(panel.prices)), np.nan)
+    kinds: dict[str, list[int]] = {"bilateral": [], "rolling": [], "expanding": []}
+    for at, recipe in enumerate(recipes):
+        expands = recipe.is_spliced and recipe.window == "expanding"
+        kinds["bilateral" if recipe.is_bilateral else "expanding" if expands else "rolling"].append(at)
+    if kinds["bilateral"]:
+        _bilateral(panel, [recipes[at] for at in kinds["bilateral"]], kinds["bilateral"], result)
+    if kinds["rolling"]:
+        links = None if years is None else links_of(years)
+        made, found = _multilateral(
+            replace(panel, links=links), [recipes[at] for at in kinds["rolling"]], collect=failures is not None
+        )
+        _place(made, found, kinds["rolling"], np.arange(len(panel.segments)), result, failures)
+    if kinds["expanding"]:
+        _expanding(panel, [recipes[at] for at in kinds["expanding"]], kinds["expanding"], years, result, failures)
     return result
+
+
+def _place(
+    made: Array,
+    found: list[Failure],
+    positions: list[int],
+    segments: Positions,
+    into: Array,
+    failures: list[Failure] | None,
+) -> None:
+    """Put the indexes of some recipes and segments where they belong, and their failures."""
+    into[np.ix_(np.array(positions), segments)] = made
+    if failures is not None:
+        failures += [
+            Failure(positions[failure.recipe], int(segments[failure.segment]), failure.reason) for failure in found
+        ]
+
+
+def _expanding(
+    panel: _Panel,
+    recipes: list[Recipe],
+    positions: list[int],
+    years: Years | None,
+    into: Array,
+    failures: list[Failure] | None,
+) -> None:
+    """Segments whose link months are the same go together: where nothing is sold in one, an earlier period serves."""
+    sold = np.isfinite(panel.prices)
+    if panel.quantities is not None:
+        sold &= panel.quantities > 0
+    counts = sum_segments(sold.astype(np.float64), panel.segments)
+    priced = (sum_others(counts) if panel.leave_out else counts) > 0
+    links, kinds = np.unique([links_of(known(years), row) for row in priced], axis=0, return_inverse=True)
+    for kind, link in enumerate(links):
+        members = np.flatnonzero(kinds == kind)
+        alone = panel if panel.leave_out or len(links) == 1 else panel.part(members)
+        made, found = _multilateral(replace(alone, links=link), recipes, collect=failures is not None)
+        if panel.leave_out and len(links) > 1:
+            made = made[:, members]
+            found = [
+                replace(one, segment=int(np.searchsorted(members, one.segment)))
+                for one in found
+                if one.segment in members
+            ]
+        _place(made, found, positions, members, into, failures)
 
 
 @dataclass(frozen=True, slots=True)
@@ -147,12 +170,21 @@ class _Panel:
     quantities: Array | None
     segments: Positions
     leave_out: bool
-    years: Years | None
+    links: Positions | None
+
+    def part(self, segments: Positions) -> _Panel:
+        """Some of the segments, each as it is."""
+        sizes = np.diff(np.append(self.segments, self.prices.shape[1]))[segments]
+        columns = np.concatenate(
+            [self.segments[at] + np.arange(size) for at, size in zip(segments, sizes, strict=True)]
+        )
+        values = None if self.quantities is None else self.quantities.take(columns, axis=1)
+        return replace(
+            self, prices=self.prices.take(columns, axis=1), quantities=values, segments=np.cumsum(sizes) - sizes
+        )
 
 
-def _bilateral(
-    panel: _Panel, recipes: list[Recipe], positions: list[int], into: Array, _: list[Failure] | None
-) -> None:
+def _bilateral(panel: _Panel, recipes: list[Recipe], positions: list[int], into: Array) -> None:
     together: dict[tuple[object, object], list[int]] = {}
     for at, recipe in enumerate(recipes):
         together.setdefault((recipe.form, _weighing(recipe)), []).append(at)
@@ -180,33 +212,23 @@ def _weighing(recipe: Recipe) -> object:
     return recipe.method if recipe.method == SATO_VARTIA else "both periods"
 
 
-def period_weights(prices: Array, quantities: Array | None, recipe: Recipe) -> Array:
-    """(N,) quantities (Lowe) or turnover (Young) of the periods that give the weights, 0 = not sold in them."""
-    if not recipe.weight_periods or quantities is None:
-        raise CallError(f"'{recipe.method}' takes its weights from a period of its own, and none is given.")
-    rows = list(recipe.weight_periods)
-    values = quantities[rows] if recipe.method == "lowe" else prices[rows] * quantities[rows]
-    weights: Array = np.nansum(values, axis=0)
-    return weights
-
-
-def _multilateral(
-    panel: _Panel, recipes: list[Recipe], positions: list[int], into: Array, failures: list[Failure] | None
-) -> None:
+def _multilateral(panel: _Panel, recipes: list[Recipe], *, collect: bool) -> tuple[Array, list[Failure]]:
+    """(R, B, T) indexes and, if they are to be collected, the first window that falls apart of each."""
     sums = _shared_sums(panel, recipes)
     pairs: dict[str, Array] = {}
     fitted: dict[tuple[str, object], tuple[Array, list[UnconnectedPeriods]]] = {}
-    for at, recipe in zip(positions, recipes, strict=True):
+    made = np.full((len(recipes), len(panel.segments), len(panel.prices)), np.nan)
+    failures = []
+    for at, recipe in enumerate(recipes):
         key = (recipe.method, _window_key(recipe, panel))
         if key not in fitted:
             apart: list[UnconnectedPeriods] = []
-            fitted[key] = _fit(panel, recipe, sums, pairs, apart if failures is not None else None), apart
+            fitted[key] = _fit(panel, recipe, sums, pairs, apart if collect else None), apart
         levels, apart = fitted[key]
-        into[at] = np.exp(levels) if recipe.method == "similarity" else _splice(panel, recipe, levels)
-        for reason in apart:
-            into[at, reason.segment] = np.nan
-        if failures is not None:
-            failures += [Failure(at, reason.segment, reason) for reason in {r.segment: r for r in apart}.values()]
+        made[at] = np.exp(levels) if recipe.method == "similarity" else _splice(panel, recipe, levels)
+        first = {reason.segment: reason for reason in reversed(apart)}
+        failures += [Failure(at, segment, reason) for segment, reason in sorted(first.items())]
+    return made, failures
 
 
 def _fit(
@@ -221,7 +243,7 @@ def _fit(
         assert sums is not None
         reach = None if recipe.window is None else window_length(recipe, len(panel.prices)) - 1
         return similarity.link(sums, reach, apart=apart).levels
-    windows = windows_of(recipe, len(panel.prices), panel.years)
+    windows = windows_of(recipe, len(panel.prices), panel.links)
     if recipe.method.startswith("geks-"):
         assert sums is not None
         formula = recipe.method.removeprefix("geks-")
@@ -236,11 +258,11 @@ def _fit(
 
 def _splice(panel: _Panel, recipe: Recipe, levels: Array) -> Array:
     """(B, T) series from the levels of windows."""
-    windows = windows_of(recipe, len(panel.prices), panel.years)
+    windows = windows_of(recipe, len(panel.prices), panel.links)
     links = None
     if recipe.needs_years:
         rows = np.arange(levels.shape[1]) - windows.before
-        links = np.clip(links_of(panel.years)[rows + windows.length - 1] - rows, 0, windows.length - 2)
+        links = np.clip(known(panel.links)[rows + windows.length - 1] - rows, 0, windows.length - 2)
     index: Array = splice(levels, splice=recipe.splice, onto=recipe.onto, links=links)
     return index[:, windows.before :]
 
@@ -269,45 +291,11 @@ def _reach(recipe: Recipe, panel: _Panel) -> int:
     """The largest distance in periods that a recipe compares over."""
     if recipe.method == "similarity":
         return window_length(recipe, len(panel.prices)) - 1
-    return windows_of(recipe, len(panel.prices), panel.years).length - 1
+    return windows_of(recipe, len(panel.prices), panel.links).length - 1
 
 
 def _window_key(recipe: Recipe, panel: _Panel) -> object:
     return recipe.window if recipe.window == "expanding" else window_length(recipe, len(panel.prices))
-
-
-def window_length(recipe: Recipe, periods: int) -> int:
-    """Periods in a window of the recipe, none longer than the panel."""
-    return periods if recipe.window is None or recipe.window == "expanding" else min(recipe.window, periods)
-
-
-def windows_of(recipe: Recipe, periods: int, years: Years | None) -> Windows:
-    """The windows of a multilateral recipe over T periods.
-
-    Raises CallError where the windows and the link months do not fit each other.
-    """
-    if recipe.needs_years and years is None:
-        raise CallError("Linking on the link month needs periods that tell their month, such as 2024-03 or dates.")
-    if recipe.window == "expanding":
-        if recipe.splice != "link-month":
-            raise CallError(f"An expanding window is linked on its link month; splice is '{recipe.splice}'.")
-        return Windows.expanding(links_of(years))
-    windows = Windows.rolling(periods, window_length(recipe, periods))
-    if recipe.needs_years:
-        ends = np.arange(windows.length, periods)
-        reach = int((ends - links_of(years)[ends]).max(initial=0)) + 1
-        if reach > windows.length:
-            raise CallError(
-                f"A window of {windows.length} periods does not reach the link month; it takes at least {reach}."
-            )
-    return windows
-
-
-def links_of(years: Years | None) -> Positions:
-    """(T,) position of the last period of an earlier year, 0 where there is none."""
-    assert years is not None
-    links: Positions = np.maximum(np.searchsorted(years, years, side="left") - 1, 0).astype(np.intp)
-    return links
 
 
 _FITTED: dict[str, Callable[..., Array]] = {

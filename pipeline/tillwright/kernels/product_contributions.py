@@ -11,8 +11,10 @@ from tillwright.kernels import geary_khamis, similarity, time_product_dummy
 from tillwright.kernels.bilateral import log_pair_levels
 from tillwright.kernels.formulas import BASE_WEIGHTED, wanted_pairs
 from tillwright.kernels.link_contributions import contribute, ratio_parts
-from tillwright.kernels.methods import Recipe, Years, make_index, period_weights, window_length, windows_of
+from tillwright.kernels.methods import HELD, Failure, make_indexes
+from tillwright.kernels.network import Flags
 from tillwright.kernels.pairs import Array, Positions, make_fields, sum_all_pairs
+from tillwright.kernels.recipes import Recipe, Years, links_of, period_weights, window_length, windows_of
 from tillwright.kernels.windows import Windows
 
 
@@ -31,7 +33,14 @@ class Decomposition:
 
 
 def decompose(
-    prices: Array, quantities: Array | None, recipe: Recipe, start: int, end: int, *, years: Years | None = None
+    prices: Array,
+    quantities: Array | None,
+    recipe: Recipe,
+    start: int,
+    end: int,
+    *,
+    years: Years | None = None,
+    pass_over: bool = False,
 ) -> Decomposition:
     """Contributions of (N,) products to the movement from period `start` to a later period `end`.
 
@@ -52,6 +61,7 @@ def decompose(
     ----------
     prices, quantities : (T, N) arrays; NaN = not sold.
     years : as for `kernels.methods.make_index`.
+    pass_over : windows that fall apart are passed over, as with `failures` in `kernels.methods.make_indexes`.
 
     Returns
     -------
@@ -68,7 +78,8 @@ def decompose(
     """
     if not start < end:
         raise CallError(f"A movement goes from an earlier period to a later one, not from {start} to {end}.")
-    index = make_index(prices, quantities, recipe, years=years)
+    failures: list[Failure] | None = [] if pass_over else None
+    index = make_indexes(prices, quantities, [recipe], years=years, failures=failures)[0, 0]
     change = float(np.log(index[end]) - np.log(index[start]))
     if not np.isfinite(change):
         raise NoLevel("The index has no level in one of the two periods.")
@@ -94,15 +105,19 @@ def _along_links(prices: Array, quantities: Array | None, recipe: Recipe, start:
         direct: Array = later - earlier
         return direct
     steps = priced[(priced >= start) & (priced <= end)]
-    parts: Array = contribute(recipe.method, prices, quantities, steps[:-1], steps[1:], weights).sum(axis=0)
-    return parts
+    total = np.zeros(prices.shape[1])
+    many = max(HELD // max(prices.shape[1], 1), 1)
+    for low in range(0, len(steps) - 1, many):
+        base, current = steps[:-1][low : low + many], steps[1:][low : low + many]
+        total += contribute(recipe.method, prices, quantities, base, current, weights).sum(axis=0)
+    return total
 
 
 def _along_similarity(prices: Array, quantities: Array | None, recipe: Recipe, start: int, end: int) -> Array:
     reach = None if recipe.window is None else window_length(recipe, len(prices)) - 1
     wanted = [*similarity.WANTED, *wanted_pairs("fisher")]
     sums = sum_all_pairs(prices, quantities, wanted, segments=np.zeros(1, dtype=np.intp))
-    to = similarity.link(sums, reach).to[0]
+    to = similarity.link(sums, reach, apart=[]).to[0]
     total = np.zeros(prices.shape[1])
     for sign, period in ((1.0, end), (-1.0, start)):
         at = period
@@ -120,7 +135,12 @@ def _through_windows(
     index: Array,
     years: Years | None,
 ) -> Array:
-    windows = windows_of(recipe, len(prices), years)
+    links = None
+    if recipe.needs_years and years is not None:
+        sold = np.isfinite(prices) if quantities is None else np.isfinite(prices) & (quantities > 0)
+        priced: Flags = np.asarray(sold.any(axis=1))
+        links = links_of(years, priced if recipe.window == "expanding" else None)
+    windows = windows_of(recipe, len(prices), links)
     total = np.zeros(prices.shape[1])
     start, end = movement
     while end > start:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 
+from tillwright.kernels.means import logarithmic_mean, shares
 from tillwright.kernels.pairs import BLOCK, Array, Positions
 
 
@@ -45,12 +46,7 @@ def log_levels(
 
 def weigh(before: Array, after: Array) -> Array:
     """(K, n) weights that add up to 1 in each row, from turnovers in the two periods, 0 = not matched."""
-    both = (before > 0) & (after > 0)
-    base, now = _shares(before), _shares(after)
-    gap = np.log(np.where(both, now, 1.0) / np.where(both, base, 1.0))
-    with np.errstate(divide="ignore", invalid="ignore"):
-        slope = np.where(gap == 0, 1.0, np.expm1(gap) / gap)
-    return _shares(np.where(both, base * slope, 0.0))
+    return shares(logarithmic_mean(shares(before), shares(after)))
 
 
 def _compare(before: Array, after: Array, sold_before: Array, sold_after: Array) -> Array:
@@ -58,9 +54,3 @@ def _compare(before: Array, after: Array, sold_before: Array, sold_after: Array)
     relative = np.log(np.where(matched, after, 1.0) / np.where(matched, before, 1.0))
     weights = weigh(np.where(matched, before * sold_before, 0.0), np.where(matched, after * sold_after, 0.0))
     return np.where(weights.sum(axis=1) > 0, (weights * relative).sum(axis=1), np.nan)
-
-
-def _shares(values: Array) -> Array:
-    totals = values.sum(axis=1, keepdims=True)
-    shares: Array = values / np.where(totals > 0, totals, 1.0)
-    return shares

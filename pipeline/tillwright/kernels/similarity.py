@@ -39,7 +39,7 @@ def link(pair_sum: PairSum, reach: int | None = None, *, apart: list[Unconnected
     pair_sum : sums over products for all pairs of periods, (B, T, T), of the fields in `WANTED` and those of
         "fisher".
     reach : how many periods back to look; None = all. Of equal candidates the latest is taken.
-    apart : collects segments with a period that shares no product with those it may be linked to;
+    apart : collects periods that share no product with those they may be linked to, which are NaN then;
         None = raise.
 
     Returns
@@ -71,8 +71,7 @@ def link(pair_sum: PairSum, reach: int | None = None, *, apart: list[Unconnected
             levels[linked, t] = (levels[every, latest] + logs[every, latest, t])[linked]
         levels[here[:, t] & ~started, t] = 0.0
         for segment in np.flatnonzero(here[:, t] & started & ~linked):
-            before = (low + np.flatnonzero(here[segment, low:t])).tolist() or np.flatnonzero(here[segment, :t]).tolist()
-            problem = UnconnectedPeriods([before, [t]], segment=int(segment))
+            problem = UnconnectedPeriods([np.flatnonzero(here[segment, :t]).tolist(), [t]], segment=int(segment))
             if apart is None:
                 raise problem
             apart.append(problem)

@@ -43,8 +43,9 @@ def splice(
     series = levels.reshape(-1, windows, length)
     where = _link_offsets(windows, length, splice, links)
     result = np.full((len(series), windows + length - 1), np.nan)
-    for members in _alike(np.isfinite(series)):
-        result[members] = _splice_alike(series[members], where, onto)
+    result[:, :length] = series[:, 0]
+    for start in range(1, windows):
+        _extend(result, series[:, start - 1 : start + 1], start, None if where is None else int(where[start]), onto)
     index: Array = np.exp(result).reshape(*levels.shape[:-2], -1)
     return index
 
@@ -59,49 +60,33 @@ def _link_offsets(windows: int, length: int, splice: str, links: Positions | Non
     return np.full(windows, {"movement": length - 2, "window": 0, "half": length - 1 - length // 2}[splice])
 
 
-def _alike(known: NDArray[np.bool_]) -> list[Positions]:
-    """Positions of the series that have levels in the same places."""
-    if (known == known[:1]).all():
-        return [np.arange(len(known))]
-    _, kinds = np.unique(known.reshape(len(known), -1), axis=0, return_inverse=True)
-    return [np.flatnonzero(kinds == kind) for kind in range(int(kinds.max()) + 1)]
+def _extend(result: Array, windows: Array, start: int, wanted: int | None, onto: str) -> None:
+    """Write into (B, T) log levels that of the period in which the second of two windows, (B, 2, W), ends."""
+    length = windows.shape[-1]
+    now = start + length - 1
+    made, new, before = result[:, start:now], windows[:, 1], windows[:, 0, 1:]
+    old = made if onto == "published" else before
+    used = _used_links(np.isfinite(old) & np.isfinite(new[:, :-1]), wanted)
+    counts = used.sum(axis=1)
+    level = np.where(used, old - new[:, :-1], 0.0).sum(axis=1) / np.maximum(counts, 1) + new[:, -1]
+    linked = counts > 0
+    if onto != "published":
+        carried = np.isfinite(before) & np.isfinite(made)
+        last = length - 2 - carried[:, ::-1].argmax(axis=1)[:, None]
+        gap = np.where(carried, made - before, 0.0)
+        level += np.take_along_axis(gap, last, axis=1)[:, 0]
+        linked &= carried.any(axis=1)
+    begun = np.isfinite(result[:, :now]).any(axis=1)
+    result[:, now] = np.where(linked, level, np.where(begun | ~np.isfinite(new[:, -1]), np.nan, 0.0))
 
 
-def _splice_alike(levels: Array, where: Positions | None, onto: str) -> Array:
-    """(B, T) log levels of B series whose windows have levels in the same places."""
-    count, windows, length = levels.shape
-    known = np.isfinite(levels[0])
-    result = np.full((count, windows + length - 1), np.nan)
-    result[:, :length] = levels[:, 0]
-    given = np.isfinite(result[0])
-    for start in range(1, windows):
-        now = start + length - 1
-        new = levels[:, start]
-        if not known[start, -1]:
-            continue
-        given[now] = True
-        if not given[:now].any():
-            result[:, now] = 0.0
-            continue
-        old = result[:, start:now] if onto == "published" else levels[:, start - 1, 1:]
-        shared = (given[start:now] if onto == "published" else known[start - 1, 1:]) & known[start, :-1]
-        links = _usable_links(shared, None if where is None else int(where[start]))
-        at_all = np.flatnonzero(known[start - 1, 1:] & given[start:now])
-        if links.size == 0 or (onto != "published" and at_all.size == 0):
-            given[now] = False
-            continue
-        gap = (old[:, links] - new[:, links]).mean(axis=1)
-        result[:, now] = gap + new[:, -1]
-        if onto != "published":
-            last = at_all[-1]
-            result[:, now] += result[:, start + last] - old[:, last]
-    return result
-
-
-def _usable_links(shared: NDArray[np.bool_], wanted: int | None) -> Positions:
-    """Positions in the overlap (0 … W−2) that the new window is linked on; None = all."""
-    candidates = np.flatnonzero(shared)
-    if wanted is None or candidates.size == 0:
-        return candidates
-    at = int(np.searchsorted(candidates, wanted, side="right")) - 1
-    return candidates[max(at, 0) : max(at, 0) + 1]
+def _used_links(shared: NDArray[np.bool_], wanted: int | None) -> NDArray[np.bool_]:
+    """(B, W − 1) positions in the overlap that each new window is linked on; `wanted` None = on all shared."""
+    if wanted is None:
+        return shared
+    positions = np.arange(shared.shape[1])
+    earlier = np.where(shared & (positions <= wanted), positions, -1).max(axis=1)
+    later = np.where(shared & (positions > wanted), positions, shared.shape[1]).min(axis=1)
+    chosen = np.where(earlier >= 0, earlier, later)
+    used: NDArray[np.bool_] = shared & (positions == chosen[:, None])
+    return used

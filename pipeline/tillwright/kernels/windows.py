@@ -81,7 +81,7 @@ def fit_windows(
     left, rights : (T, N) arrays, 0 = not sold.
     solve : takes the (…, W, W) matrices of all rights and returns (…, W) log levels.
     segments, leave_out : as in `kernels.pairs.sum_all_pairs`.
-    apart : collects windows that fall apart, whose levels are NaN then; None = raise.
+    apart : collects windows that fall apart, which are NaN then; None = raise.
 
     Raises
     ------
@@ -104,7 +104,7 @@ def fit_windows(
             matrices = [sum_others(matrix) for matrix in matrices]
         here = sliding_window_view(present > 0, length, axis=1)[:, rows.start : rows.stop] & windows.covered()[rows]
         for at, row in enumerate(rows):
-            settle(matrices[0][:, at] > 0, here[:, at], row - windows.before, apart)
+            here[settle(matrices[0][:, at] > 0, here[:, at], row - windows.before, apart), at] = False
         levels[:, rows] = np.where(here, solve(*matrices), np.nan)
     return anchor(levels)
 
@@ -139,12 +139,13 @@ def settle(
     start: int,
     apart: list[UnconnectedPeriods] | None,
     segments: Positions | None = None,
-) -> None:
-    """Raise UnconnectedPeriods for the first of B windows that falls apart, or note all in `apart`.
+) -> list[int]:
+    """Positions of those of B windows that fall apart, noted in `apart`; None = raise for the first.
 
     `linked` (B, W, W) tells which periods have a product in common, `present` (B, W) which have any; the
     windows begin in period `start` and are those of `segments`, None = of all.
     """
+    found = []
     for position, groups in enumerate(find_groups(linked, present)):
         if groups:
             segment = position if segments is None else int(segments[position])
@@ -152,3 +153,5 @@ def settle(
             if apart is None:
                 raise problem
             apart.append(problem)
+            found.append(position)
+    return found

@@ -7,9 +7,9 @@ from collections.abc import Collection
 import numpy as np
 import polars as pl
 
-from tillwright.errors import UnconnectedPeriods
 from tillwright.kernels.churn import measure_churn
-from tillwright.kernels.methods import Recipe, Years, make_index
+from tillwright.kernels.methods import Failure, make_indexes
+from tillwright.kernels.recipes import Recipe, Years
 from tillwright.panels import Array, Block, to_arrays
 from tillwright.periods import year_and_month
 from tillwright.stages.context import Context
@@ -50,22 +50,19 @@ def compile_indexes(context: Context) -> int:
 def _try_index(block: Block, recipe: Recipe, context: Context, periods: pl.Series) -> tuple[Array | None, str]:
     """The index, if one can be made, and what is wrong with it, if anything is.
 
-    A window that falls apart ends the index before it; what was made of earlier windows stands.
+    Windows that fall apart are passed over; what is made of others stands.
     """
     prices, quantities = block.prices, block.values
     assert quantities is not None
     priced = np.flatnonzero(np.isfinite(prices).any(axis=1))
-    start, end = int(priced[0]), int(priced[-1]) + 1
+    cut = slice(int(priced[0]), int(priced[-1]) + 1)
+    failures: list[Failure] = []
     index, message = np.full(len(prices), np.nan), ""
-    for stop in range(end, start, -1):
-        try:
-            index[start:stop] = make_index(
-                prices[start:stop], quantities[start:stop], recipe, years=_link_years(context, periods[start:stop])
-            )
-            break
-        except UnconnectedPeriods as error:
-            labels = [context.label(day) for day in periods[start:stop]]
-            message = str(error.labelled(labels, f"{block.key[0]} {block.key[1]}".strip()))
+    years = _link_years(context, periods[cut.start : cut.stop])
+    index[cut] = make_indexes(prices[cut], quantities[cut], [recipe], years=years, failures=failures)[0, 0]
+    if failures:
+        labels = [context.label(day) for day in periods[cut.start : cut.stop]]
+        message = str(failures[0].reason.labelled(labels, f"{block.key[0]} {block.key[1]}".strip()))
     gaps = np.flatnonzero(~np.isfinite(index))
     if gaps.size and not message:
         first, last = context.label(periods[int(gaps[0])]), context.label(periods[int(gaps[-1])])
