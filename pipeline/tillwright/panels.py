@@ -187,13 +187,15 @@ def _check_periods(periods: pl.Series) -> None:
         periods = periods.cast(pl.String)
     if periods.dtype != pl.String:
         return
-    odd = periods.filter(~periods.str.contains(_SORTS_AS_TIME))
-    shapes = periods.str.replace_all(r"\d", "0")
+    labels = periods.unique(maintain_order=True)
+    odd = labels.filter(~labels.str.contains(_SORTS_AS_TIME))
+    shapes = labels.str.replace_all(r"\d", "0")
     if not len(odd) and shapes.n_unique() > 1:
-        odd = periods.filter(shapes != shapes[0])
+        odd = labels.filter(shapes != shapes[0])
     if len(odd):
+        rows = periods.is_in(odd.implode()).sum()
         raise BadPanel(
-            f"Column '{periods.name}' holds '{odd[0]}', and {len(odd)} of {len(periods)} rows like it. A period is a "
+            f"Column '{periods.name}' holds '{odd[0]}', and {rows} of {len(periods)} rows like it. A period is a "
             "date, an integer, or text such as 2024-03, 2024-W07, 2024-Q1 or 2024-03-31: all written alike, so that "
             "they sort as time."
         )
