@@ -9,7 +9,8 @@
     │   ├── BadPanel                3   a panel that no index can be made of
     │   ├── UnconnectedPeriods      3   a window whose periods share no chain of products
     │   ├── NoLevel                 3   an index without a level in a period that is asked for
-    │   └── UnconnectedPlaces       3   places that share no chain of products
+    │   ├── UnconnectedPlaces       3   places that share no chain of products
+    │   └── TooFewObservations      3   a regression on attributes with too few prices to fit it
     ├── WorkspaceBusy               3   another compile holds the workspace
     ├── OrchestrationError          3   Prefect failed, not a step of the compile
     └── BrokenInvariant             3   a run-time check failed: a defect, never a result
@@ -154,6 +155,35 @@ class UnconnectedPlaces(DataError):
             f"in common ({sides}). Widen the product definition, compare the places of each group, or leave what "
             "cannot be compared empty with unconnected 'blank'."
         )
+
+
+class TooFewObservations(DataError):
+    """A regression on attributes has fewer prices than asked for, or no more than it has parameters.
+
+    `period` is the position of the period regressed alone when raised by a kernel, its label once `labelled`
+    has been applied; None = the regression is over all periods.
+    """
+
+    def __init__(
+        self, observations: int, parameters: int, least: int, *, period: object = None, where: str = ""
+    ) -> None:
+        self.observations = observations
+        self.parameters = parameters
+        self.least = least
+        self.period = period
+        self.where = where
+        place = f" for {where}" if where else ""
+        time = "" if period is None else f" in period {period}"
+        super().__init__(
+            f"No hedonic regression can be made{place}{time}: it has {observations} prices of products with known "
+            f"attributes, {parameters} parameters, and needs at least {max(least, parameters + 1)} prices. Name fewer "
+            "attributes, join rare categories, take periods together, or lower the least number of prices."
+        )
+
+    def labelled(self, labels: Sequence[object], where: str) -> TooFewObservations:
+        """The same error with the period's label instead of its position and the place named."""
+        period = None if self.period is None else labels[int(str(self.period))]
+        return TooFewObservations(self.observations, self.parameters, self.least, period=period, where=where)
 
 
 class WorkspaceBusy(TillwrightError):
