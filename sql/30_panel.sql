@@ -19,7 +19,7 @@ summed as (
         counted_sales.stratum,
         assigned_products.product,
         counted_sales.period,
-        sum(counted_sales.quantity) as quantity,
+        sum(counted_sales.quantity * cast(assigned_products.units_per_item as decimal(18, 8))) as quantity,
         sum(counted_sales.turnover) as turnover,
         cast(sum(counted_sales.lines) as bigint) as lines
     from counted_sales
@@ -37,7 +37,7 @@ priced as (
         case
             when quantity > 0 and turnover > 0 then cast(turnover as double) / cast(quantity as double)
         end as price,
-        quantity,
+        cast(quantity as decimal(38, 4)) as quantity,
         turnover,
         lines
     from summed

@@ -22,7 +22,20 @@ from tillwright.stages.compiling import Request, carry_out
 from tillwright.store.ledger import Ledger
 
 TILLWRIGHT = Path(sys.executable).with_name("tillwright")
-STEPS = ("intake shop 1", "deliveries", "gates", "identity", "panel", "screening", "indexes", "aggregation")
+STEPS = (
+    "intake shop 1",
+    "deliveries",
+    "gates",
+    "items",
+    "successions",
+    "products",
+    "panel",
+    "churn",
+    "screening",
+    "indexes",
+    "effects",
+    "aggregation",
+)
 
 
 def compile_plan(plan: Path, **more: str) -> subprocess.CompletedProcess[str]:

@@ -12,6 +12,7 @@ from pydantic import ValidationError
 from tests.stages.plans import problems, read
 from tests.stages.small import COLUMNS, HEADINGS, feed, line, put, sections, write_plan
 from tillwright.errors import PlanError
+from tillwright.plan import Clearance, Imputation, SmallSales
 from tillwright.plan_file import read_plan
 from tillwright.stages.compiling import Request, carry_out
 
@@ -40,6 +41,7 @@ def test_valid_plan_has_the_careful_defaults(folder: Path) -> None:
         "published",
     )
     assert plan.screening.extreme == (0.25, 4.0)
+    assert plan.screening.on == ("extreme",)
     assert plan.feed[0].replaces == "same-name"
     assert plan.feed[0].returns == "net"
     assert references.tree.leaves == ("M", "S")
@@ -96,6 +98,20 @@ def test_nearest_override_on_the_way_up_wins(folder: Path) -> None:
     assert (far.splice, far.window) == ("window", 13)
 
 
+def test_screens_that_are_on_have_the_limits_of_common_practice(folder: Path) -> None:
+    on: dict[str, Any] = {"clearance": {}, "small": {}, "imputation": {}}
+    override = [{"heading": "M", "method": "carli"}]
+    plan, references = read(folder, changed(screening=on, index={"override": override}))
+    screening = plan.screening
+    assert screening.clearance == Clearance(price_fall=0.7, quantity_fall=0.5, ahead=2)
+    assert screening.small == SmallSales(factor=1.25)
+    assert screening.imputation == Imputation(run="short", limit=3)
+    assert screening.on == ("extreme", "clearance", "small", "imputation")
+    assert screening.without("small").on == ("extreme", "clearance", "imputation")
+    formulas = [plan.elementary_formula(references.tree.ancestry(leaf)) for leaf in ("M", "S")]
+    assert formulas == ["carli", None]
+
+
 def test_plan_cannot_be_changed(folder: Path) -> None:
     plan, _ = read(folder)
     for section, key in ((plan, "title"), (plan.plan, "start"), (plan.feed[0].columns, "item"), (plan.index, "window")):
@@ -148,6 +164,18 @@ MISSHAPEN: list[tuple[str, dict[str, Any]]] = [
     ("feed.0.gates.refused_share", sections(feed(gates={"refused_share": -0.1}))),
     ("feed.0.limits.unit_price.0", sections(feed(limits={"unit_price": [0.0, 10.0]}))),
     ("index.window", changed(index={"window": 1})),
+    ("screening.clearance", changed(screening={"clearance": "on"})),
+    ("screening.clearance", changed(screening={"clearance": 0.7})),
+    ("screening.clearance.price", changed(screening={"clearance": {"price": 0.7}})),
+    ("screening.clearance.price_fall", changed(screening={"clearance": {"price_fall": 0.0}})),
+    ("screening.clearance.quantity_fall", changed(screening={"clearance": {"quantity_fall": -0.5}})),
+    ("screening.clearance.ahead", changed(screening={"clearance": {"ahead": 0}})),
+    ("screening.small", changed(screening={"small": "on"})),
+    ("screening.small.lambda", changed(screening={"small": {"lambda": 1.25}})),
+    ("screening.small.factor", changed(screening={"small": {"factor": 0.0}})),
+    ("screening.imputation", changed(screening={"imputation": "short"})),
+    ("screening.imputation.run", changed(screening={"imputation": {"run": "medium"}}, index={"method": "jevons"})),
+    ("screening.imputation.limit", changed(screening={"imputation": {"limit": 0}}, index={"method": "jevons"})),
     ("index.method", changed(index={"method": "guess"})),
     ("index.override.0.method", changed(index={"override": [{"heading": "M", "method": "guess"}]})),
     ("weights.link_month", changed(weights={"link_month": 13})),
@@ -203,6 +231,20 @@ SENSELESS: list[tuple[str, dict[str, Any]]] = [
     ("screening.extreme", changed(screening={"extreme": [1.5, 4.0]})),
     ("screening.extreme", changed(screening={"extreme": [0.2, 0.5]})),
     ("screening.extreme", changed(screening={"extreme": [4.0, 0.25]})),
+    ("screening.clearance.price_fall", changed(screening={"clearance": {"price_fall": 1.0}})),
+    ("screening.clearance.quantity_fall", changed(screening={"clearance": {"quantity_fall": 1.5}})),
+    ("screening.small.factor", changed(screening={"small": {"factor": 1.0}})),
+    ("screening.imputation", changed(screening={"imputation": {}})),
+    (
+        "screening.imputation",
+        changed(screening={"imputation": {}}, index={"override": [{"heading": "0", "method": "fisher"}]}),
+    ),
+    ("successions.ask", changed(successions={"accept": 0.7, "ask": 0.8})),
+    ("products.by", changed(products={"by": ["fat"]})),
+    ("products.by", changed(products={"by": ["item", "brand"]})),
+    ("products.override.0.by", changed(products={"override": [{"heading": "01", "by": ["colour"]}]})),
+    ("products.override.0.heading", changed(products={"override": [{"heading": "X", "by": ["brand"]}]})),
+    ("feed.0.item_part", sections(feed(item_part="2[0-9]"))),
     ("index.splice", changed(index={"window": "expanding"})),
     ("index.window", changed(index={"window": 12, "splice": "link-month"})),
     ("index.override.0.window", changed(index={"override": [{"heading": "01", "window": 5, "splice": "link-month"}]})),

@@ -19,7 +19,7 @@ QUERIES = list(load_queries().values())
 # A view that others sum over is not sorted for its own sake; every other query makes a table or a frame.
 UNSORTED_VIEWS = {"lines", "marked"}
 # Lines and turnover received; what was accepted and refused is set beside them once both are known.
-COMPLETED_LATER = {"totals"}
+COMPLETED_LATER = {"items", "totals"}
 
 each_query = pytest.mark.parametrize("query", QUERIES, ids=lambda query: query.name)
 

@@ -41,10 +41,12 @@ def test_every_block_for_researchers_runs_in_order(folder: Path, monkeypatch: py
                 assert line.startswith(PREFIX)
                 assert commands.main(shlex.split(line.removeprefix(PREFIX)), standalone_mode=False) == 0
         ran[language] += 1
-    assert ran == {"python": 2, "sh": 4}
+    assert ran == {"python": 3, "sh": 5}
     # Outlets of one chain: their levels lie within some per cent of each other, and no line error shows.
     levels = pl.read_csv("sample_parquet/work/levels.csv")["level"]
     assert levels.null_count() == 0
     assert levels.is_between(90, 110).all()
+    hedonic = pl.read_csv("sample_parquet/work/hedonic.csv")
+    assert hedonic["index"].null_count() == 0
     parts = pl.read_csv("sample_parquet/work/contributions.csv")
     assert set(parts["status"]) >= {"continuing", "splice"}

@@ -111,7 +111,7 @@ def test_a_compile_killed_in_intake_and_in_indexes_ends_in_the_same_bytes(
     assert left - 1 <= len(unchanged) <= left
 
     carry_out(Request(plan, work))
-    assert run_again(work, 3) == {"indexes", "aggregation"}
+    assert run_again(work, 3) == {"indexes", "effects", "aggregation"}
     assert content(work) == content(sample.context.workspace.root)
 
 
@@ -151,10 +151,10 @@ def test_a_table_that_was_damaged_is_made_again(small_plan: Path) -> None:
         (
             'heading = "01.1.4.E"\nmethod = "dutot"',
             'heading = "01.1.4.E"\nmethod = "jevons"',
-            {"indexes", "aggregation"},
+            {"indexes", "effects", "aggregation"},
         ),
         ("rounding = 1", "rounding = 2", {"aggregation"}),
-        ("extreme = [0.25, 4.0]", "extreme = [0.2, 5.0]", {"screening"}),
+        ("extreme = [0.25, 4.0]", "extreme = [0.2, 5.0]", {"screening", "effects"}),
         ("link_month = 12", "link_month = 12\n", set()),
     ],
 )

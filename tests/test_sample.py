@@ -259,3 +259,20 @@ def test_a_plan_gives_what_the_function_gives(
     both = compiled.join(expected, on=["ea", "period"], how="full", coalesce=True, validate="1:1")
     np.testing.assert_allclose(both["level"].to_numpy(), both["index"].to_numpy(), rtol=1e-9)
     assert both.height == compiled.height
+
+
+def test_joining_relaunches_brings_the_compile_nearer_to_the_truth(
+    sample: Compiled, sample_folder: Path, tmp_path: Path, planted: dict[str, Any]
+) -> None:
+    shutil.copytree(sample_folder, tmp_path / "plan", ignore=shutil.ignore_patterns("work"))
+    shutil.copytree(sample.context.workspace.root, tmp_path / "work")
+    plan = tmp_path / "plan" / "plan.toml"
+    plan.write_text(plan.read_text(encoding="utf-8") + "\n[successions]\n", encoding="utf-8")
+    workspace = carry_out(Request(plan, tmp_path / "work")).context.workspace
+    pairs = workspace.read("successions").filter(pl.col("status") == "accepted")
+    found = set(pairs.select("feed", "old_item", "new_item").iter_rows())
+    told = {(row["feed"], row["old"], row["new"]) for row in planted["relaunches"]}
+    assert len(found & told) >= 0.9 * len(told)
+    joined = workspace.read("ea_indexes").filter(pl.col("method") == GEKS).rename({"level": "index"})
+    alone = sample.context.workspace.read("ea_indexes").filter(pl.col("method") == GEKS).rename({"level": "index"})
+    assert average(last_month(alone)) < average(last_month(joined)) < 0

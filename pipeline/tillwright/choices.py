@@ -4,6 +4,10 @@ from __future__ import annotations
 
 from typing import Literal, TypeAlias, get_args
 
+from tillwright.kernels.attributes import Missing
+from tillwright.kernels.hedonic import Errors, Regressions
+from tillwright.kernels.imputation import Elementary, Run
+
 PeriodKind: TypeAlias = Literal["month", "week", "quarter"]
 MonthRule: TypeAlias = Literal["calendar", "whole-weeks", "first-weeks"]
 Returns: TypeAlias = Literal["net", "refuse"]
@@ -35,6 +39,11 @@ Splice: TypeAlias = Literal["movement", "window", "half", "mean", "link-month"]
 Window: TypeAlias = int | Literal["expanding", "all"]
 Onto: TypeAlias = Literal["published", "recalculated"]
 Unconnected: TypeAlias = Literal["refuse", "blank"]
+HedonicMethod: TypeAlias = Literal["time-dummy", "imputation", "geks-imputation"]
+CompiledHedonicMethod: TypeAlias = Literal["time-dummy", "geks-imputation"]
+Thin: TypeAlias = Literal["refuse", "blank"]
+ImputationRun: TypeAlias = Run
+Screen: TypeAlias = Literal["extreme", "clearance", "small", "imputation"]
 WeightSource: TypeAlias = Literal["file", "turnover"]
 WeightFormula: TypeAlias = Literal["lowe", "young"]
 Gate: TypeAlias = Literal[
@@ -57,6 +66,22 @@ FORMS: tuple[Form, ...] = get_args(Form)
 SPLICES: tuple[Splice, ...] = get_args(Splice)
 ONTO: tuple[Onto, ...] = get_args(Onto)
 UNCONNECTED: tuple[Unconnected, ...] = get_args(Unconnected)
+HEDONIC_METHODS: tuple[HedonicMethod, ...] = get_args(HedonicMethod)
+REGRESSIONS: tuple[Regressions, ...] = get_args(Regressions)
+COEFFICIENT_ERRORS: tuple[Errors, ...] = get_args(Errors)
+MISSING: tuple[Missing, ...] = get_args(Missing)
+THIN: tuple[Thin, ...] = get_args(Thin)
+IMPUTED_METHODS: tuple[Elementary, ...] = get_args(Elementary)
+
+# The order is that of precedence: what one screen sets aside, the next does not see.
+SCREENS: tuple[Screen, ...] = get_args(Screen)
+NO_NET_SALES = "no-net-sales"
+SCREEN_REASONS: dict[Screen, str] = {
+    "extreme": "extreme-relative",
+    "clearance": "clearance",
+    "small": "small-sales",
+    "imputation": "class-mean",
+}
 
 # The order is that of precedence: a refused line carries the first rule it breaks.
 REFUSAL_RULES: tuple[str, ...] = (

@@ -165,7 +165,14 @@ class TooFewObservations(DataError):
     """
 
     def __init__(
-        self, observations: int, parameters: int, least: int, *, period: object = None, where: str = ""
+        self,
+        observations: int,
+        parameters: int,
+        least: int,
+        *,
+        period: object = None,
+        where: str = "",
+        hint: str = "",
     ) -> None:
         self.observations = observations
         self.parameters = parameters
@@ -177,13 +184,13 @@ class TooFewObservations(DataError):
         super().__init__(
             f"No hedonic regression can be made{place}{time}: it has {observations} prices of products with known "
             f"attributes, {parameters} parameters, and needs at least {max(least, parameters + 1)} prices. Name fewer "
-            "attributes, join rare categories, take periods together, or lower the least number of prices."
+            "attributes, join rare categories, take periods together, or lower the least number of prices." + hint
         )
 
-    def labelled(self, labels: Sequence[object], where: str) -> TooFewObservations:
-        """The same error with the period's label instead of its position and the place named."""
+    def labelled(self, labels: Sequence[object], where: str, hint: str = "") -> TooFewObservations:
+        """The same error with the period's label instead of its position and the place named; a hint is added."""
         period = None if self.period is None else labels[int(str(self.period))]
-        return TooFewObservations(self.observations, self.parameters, self.least, period=period, where=where)
+        return TooFewObservations(self.observations, self.parameters, self.least, period=period, where=where, hint=hint)
 
 
 class WorkspaceBusy(TillwrightError):

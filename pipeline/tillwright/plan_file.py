@@ -14,7 +14,7 @@ from pydantic import TypeAdapter, ValidationError
 from tillwright.choices import PeriodKind
 from tillwright.errors import PlanError, PlanProblem
 from tillwright.periods import parse_period, year_of
-from tillwright.plan import DATE_ROLES, Plan
+from tillwright.plan import DATE_ROLES, ITEM_FACTS, IndexOverride, Plan
 
 SECTIONS = tuple(name for name in Plan.model_fields if name != "source")
 
@@ -238,12 +238,25 @@ def _screening_problems(plan: Plan) -> Iterator[PlanProblem]:
     extreme = plan.screening.extreme
     if extreme != "off" and not extreme[0] < 1 < extreme[1]:
         yield PlanProblem("screening.extreme", str(list(extreme)), "a bound below 1, then one above 1; or 'off'")
+    clearance = plan.screening.clearance
+    if clearance != "off":
+        for name in ("price_fall", "quantity_fall"):
+            share = getattr(clearance, name)
+            if not share < 1:
+                yield PlanProblem(f"screening.clearance.{name}", str(share), "a share of the last one kept, below 1")
+    small = plan.screening.small
+    if small != "off" and not small.factor > 1:
+        allowed = "above 1, or the only product of a link would sell too little"
+        yield PlanProblem("screening.small.factor", str(small.factor), allowed)
 
 
 def _index_problems(plan: Plan) -> Iterator[PlanProblem]:
     shortest = _LONGEST_YEAR[plan.plan.period] + 1
     keys = [f"index.override.{number}" for number in range(len(plan.index.override))]
-    recipes = [plan.index.overridden(), *(plan.index.overridden(override) for override in plan.index.override)]
+    # What is adjusted for quality takes its windows from [index], whatever method stands there.
+    method = plan.hedonic[0].method if plan.hedonic else None
+    overrides: list[tuple[IndexOverride, ...]] = [(), *((override,) for override in plan.index.override)]
+    recipes = [plan.index.overridden(*each, method=method) for each in overrides]
     for key, recipe in zip(["index", *keys], recipes, strict=True):
         if not recipe.is_spliced:
             continue
@@ -254,8 +267,50 @@ def _index_problems(plan: Plan) -> Iterator[PlanProblem]:
             yield PlanProblem(f"{key}.window", str(recipe.window), allowed)
 
 
+def _succession_problems(plan: Plan) -> Iterator[PlanProblem]:
+    rules = plan.successions
+    if rules is not None and rules.ask > rules.accept:
+        yield PlanProblem("successions.ask", str(rules.ask), f"at most successions.accept, {rules.accept}")
+
+
+def _product_problems(plan: Plan) -> Iterator[PlanProblem]:
+    known = {"item", *ITEM_FACTS, *(name for master in plan.item_master for name in master.attributes)}
+    choices = [("products.by", plan.products.by)]
+    choices += [
+        (f"products.override.{number}.by", override.by or ()) for number, override in enumerate(plan.products.override)
+    ]
+    for number, names in enumerate(plan.products.candidates):
+        choices.append((f"products.candidates.{number}", names))
+        if not names:
+            yield PlanProblem(f"products.candidates.{number}", "no attributes", "at least one attribute")
+    for key, names in choices:
+        for name in names:
+            if name not in known or (name == "item" and len(names) > 1):
+                allowed = f"'item' alone, or attributes: {', '.join(sorted(known - {'item'}))}"
+                yield PlanProblem(key, repr(name), allowed)
+    for number, feed in enumerate(plan.feed):
+        yield from _pattern_problems(f"feed.{number}.item_part", feed.item_part, "item")
+
+
+def _hedonic_problems(plan: Plan) -> Iterator[PlanProblem]:
+    listed = sorted({name for master in plan.item_master for name in master.attributes})
+    for number, choice in enumerate(plan.hedonic):
+        key = f"hedonic.{number}"
+        if not choice.attributes:
+            yield PlanProblem(key, "no attributes", "at least one, in numeric, logs or categorical")
+        for kind, names in (("numeric", choice.numeric), ("logs", choice.logs), ("categorical", choice.categorical)):
+            known = [*(ITEM_FACTS if kind == "categorical" else ("size",)), *listed]
+            for name in names:
+                if name not in known:
+                    yield PlanProblem(f"{key}.{kind}", repr(name), f"{', '.join(known)}, as item_master.attributes has")
+        for name in sorted({name for name in choice.attributes if choice.attributes.count(name) > 1}):
+            yield PlanProblem(key, f"{name!r} more than once", "each attribute once, in numeric, logs or categorical")
+        if any(other.heading == choice.heading for other in plan.hedonic[:number]):
+            yield PlanProblem(f"{key}.heading", repr(choice.heading), "a heading that no other [[hedonic]] has")
+
+
 _LONGEST_YEAR: dict[PeriodKind, int] = {"month": 12, "week": 53, "quarter": 4}
-_UNION_MEMBER = re.compile(r"^(constrained-|literal\[|tuple\[)")
+_UNION_MEMBER = re.compile(r"^(constrained-|literal\[|tuple\[|<)")
 
 _CHECKS: dict[Callable[[Plan], Iterator[PlanProblem]], tuple[str, ...]] = {
     _scope_problems: ("plan",),
@@ -269,5 +324,8 @@ _CHECKS: dict[Callable[[Plan], Iterator[PlanProblem]], tuple[str, ...]] = {
     _feed_name_problems: ("feed", "item_master", "answer"),
     _answer_problems: ("answer",),
     _screening_problems: ("screening",),
-    _index_problems: ("plan", "index"),
+    _index_problems: ("plan", "index", "hedonic"),
+    _hedonic_problems: ("hedonic", "item_master"),
+    _succession_problems: ("successions",),
+    _product_problems: ("products", "item_master", "feed"),
 }

@@ -15,9 +15,10 @@ import duckdb
 from tests.bench.measure import interleave, peak_memory, show
 from tillwright.queries import Resources, connect
 from tillwright.stages.context import Context
-from tillwright.stages.identity import identify
+from tillwright.stages.identity import define_products, list_items
 from tillwright.stages.intake import Delivery, check_gates, settle, take_in
 from tillwright.stages.panel import make_panel
+from tillwright.stages.successions import find_successions
 from tillwright.store.deliveries import hash_file
 from tillwright.store.references import open_plan
 from tillwright.store.workspace import Workspace
@@ -126,7 +127,9 @@ def panel(plan_file: Path) -> None:
         context, delivery = _take(plan_file, Path(folder))
         settle(context, [delivery])
         check_gates(context)
-        identify(context)
+        list_items(context)
+        find_successions(context, [])
+        define_products(context)
         make_panel(context)
 
 

@@ -4,23 +4,31 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass, fields
-from typing import Any, Literal, TypeAlias, get_args
+from typing import Any
 
 import numpy as np
 import polars as pl
 
 from tillwright.api.frames import Columns, check_choice, check_number, code, named, to_polars
-from tillwright.choices import FORMS, Form
+from tillwright.choices import (
+    COEFFICIENT_ERRORS,
+    FORMS,
+    HEDONIC_METHODS,
+    MISSING,
+    REGRESSIONS,
+    THIN,
+    Form,
+    HedonicMethod,
+    Thin,
+)
 from tillwright.errors import BadPanel, CallError, MissingColumns, TooFewObservations, UnconnectedPeriods
-from tillwright.kernels.attributes import Design, Missing, code_attributes
-from tillwright.kernels.geks import window_levels
-from tillwright.kernels.hedonic import LEAST_OBSERVATIONS, Errors, Hedonic, Regressions, impute_pairs, time_dummy
-from tillwright.kernels.pairs import Array, Positions
-from tillwright.kernels.windows import Windows
+from tillwright.kernels.attributes import Missing
+from tillwright.kernels.hedonic import LEAST_OBSERVATIONS, Errors, Hedonic, Regressions
+from tillwright.kernels.hedonic_series import TIME_DUMMY, Regressing, make_series
+from tillwright.kernels.recipes import Recipe
 from tillwright.panels import PanelArrays
+from tillwright.stages.regressions import list_coefficients, list_fits, make_design
 
-HedonicMethod: TypeAlias = Literal["time-dummy", "imputation", "geks-imputation"]
-HEDONIC_METHODS: tuple[HedonicMethod, ...] = get_args(HedonicMethod)
 RESULT = (
     *("index", "observations", "name", "coefficient", "standard_error", "t", "left_out", "unpredicted"),
     *("parameters", "degrees_of_freedom", "adjusted_r2", "dropped", "residual", "standardized_residual"),
@@ -50,16 +58,20 @@ class Hedonics:
 
 @dataclass(frozen=True, slots=True)
 class _Asked:
-    method: HedonicMethod
-    form: Form
-    regressions: Regressions
-    weighted: bool
-    errors: Errors
-    least: int
+    recipe: Recipe
+    regressing: Regressing
 
     @property
     def is_pooled(self) -> bool:
-        return self.method == "time-dummy" or self.regressions == "pooled"
+        return self.recipe.method == TIME_DUMMY or self.regressing.regressions == "pooled"
+
+
+@dataclass(frozen=True, slots=True)
+class _Made:
+    """The frames of one group, and the first of its periods that was passed over, told with its label."""
+
+    frames: Hedonics
+    problem: TooFewObservations | UnconnectedPeriods | None
 
 
 @dataclass(frozen=True, slots=True)
@@ -90,6 +102,7 @@ def hedonic(
     errors: Errors = "classical",
     missing: Missing = "category",
     least: int = LEAST_OBSERVATIONS,
+    thin: Thin = "refuse",
     period: str = "period",
     product: str = "product",
     price: str = "price",
@@ -115,6 +128,9 @@ def hedonic(
     errors : "classical", or "HC1", which holds whatever the variances of the errors.
     missing : products without a category are a "category" of their own, or "leave-out".
     least : fewest prices to make a regression of.
+    thin : "refuse" raises where a regression has too few prices, or the periods of "geks-imputation" nothing to
+        compare; "blank" leaves the index of that period missing, or of the whole group where a regression is over all
+        periods, and goes on.
     period, product, price, quantity : column names.
 
     Raises
@@ -123,29 +139,33 @@ def hedonic(
 
     Reference: `tillwright.kernels.hedonic`.
     """
-    asked = _Asked(method, form, regressions, weighted, errors, least)
+    _check_choices(method, form=form, regressions=regressions, errors=errors, missing=missing, thin=thin)
+    check_number("least", least, 1)
+    asked = _Asked(Recipe(method, form=form), Regressing(regressions, weighted, errors, least))
     wanted = _Attributes(_listed(numeric), _listed(categorical), _listed(logs), missing)
-    _check_choices(asked, missing)
     columns = named(by, period, product, price, quantity)
     table = to_polars(frame)
     _check_attributes(table, columns, wanted)
-    arrays = code(table, columns, quantities=weighted or method != "time-dummy", result=RESULT)
+    arrays = code(table, columns, quantities=weighted or method != TIME_DUMMY, result=RESULT)
     attributes = _by_product(table, columns, wanted, arrays)
-    ends = np.append(arrays.starts[1:], arrays.prices.shape[1])
-    groups = [
-        _group(arrays, attributes, wanted, asked, group, slice(int(start), int(end)), columns)
-        for group, (start, end) in enumerate(zip(arrays.starts, ends, strict=True))
-    ]
-    return Hedonics(*(pl.concat([getattr(part, field.name) for part in groups]) for field in fields(Hedonics)))
+    made = [_group(arrays, attributes, wanted, asked, group, cut, columns) for group, cut in enumerate(arrays.cuts)]
+    problems = [one.problem for one in made if one.problem is not None]
+    if problems and thin == "refuse":
+        raise _told(problems)
+    return Hedonics(*(pl.concat([getattr(one.frames, field.name) for one in made]) for field in fields(Hedonics)))
 
 
-def _check_choices(asked: _Asked, missing: str) -> None:
-    check_choice("method", asked.method, HEDONIC_METHODS)
-    check_choice("form", asked.form, FORMS)
-    check_choice("regressions", asked.regressions, get_args(Regressions))
-    check_choice("errors", asked.errors, get_args(Errors))
-    check_choice("missing", missing, get_args(Missing))
-    check_number("least", asked.least, 1)
+def _check_choices(method: object, **given: object) -> None:
+    allowed = {
+        "form": FORMS,
+        "regressions": REGRESSIONS,
+        "errors": COEFFICIENT_ERRORS,
+        "missing": MISSING,
+        "thin": THIN,
+    }
+    check_choice("method", method, HEDONIC_METHODS)
+    for name, found in given.items():
+        check_choice(name, found, allowed[name])
 
 
 def _check_attributes(table: pl.DataFrame, columns: Columns, wanted: _Attributes) -> None:
@@ -212,8 +232,8 @@ def _group(
     group: int,
     cut: slice,
     columns: Columns,
-) -> Hedonics:
-    """The frames of one group, from its first period to its last."""
+) -> _Made:
+    """One group, from its first period to its last."""
     key = arrays.keys.row(group, named=True) if arrays.keys.width else {}
     where = ", ".join(f"{name} {value}" for name, value in key.items())
     priced = np.flatnonzero(np.isfinite(arrays.prices[:, cut]).any(axis=1))
@@ -221,96 +241,36 @@ def _group(
     labels = arrays.periods[span]
     prices = arrays.prices[span, cut]
     values = None if arrays.values is None else arrays.values[span, cut]
-    design = _design(attributes[cut], wanted)
-    try:
-        index, periods, fits = _compile(prices, values, design, asked)
-    except (TooFewObservations, UnconnectedPeriods) as problem:
-        raise problem.labelled(labels.to_list(), where) from None
-    rows = [slice(None)] if asked.is_pooled else [slice(int(at), int(at) + 1) for at in periods]
-    times = None if asked.is_pooled else labels[periods]
+    design = make_design(attributes[cut], wanted.numeric, wanted.logs, wanted.categorical, missing=wanted.missing)
+    made = make_series(prices, values, design, asked.recipe, asked.regressing)
+    fits, rows = made.regressions, [slice(*span) for span in made.spans]
+    times = None if asked.is_pooled else labels[[start for start, _ in made.spans]]
     observations = np.zeros(len(labels), dtype=np.int64)
     for fit, row in zip(fits, rows, strict=True):
         observations[row] = fit.observations
-    made = {columns.period: labels, "index": 100.0 * index, "observations": observations}
-    if asked.method == "time-dummy":
-        made["standard_error"] = 100.0 * index * fits[0].level_errors
-    products = arrays.products[columns.product][cut]
+    index = {columns.period: labels, "index": 100.0 * made.index, "observations": observations}
+    if asked.recipe.method == TIME_DUMMY:
+        errors = fits[0].level_errors if fits else np.full(len(labels), np.nan)
+        index["standard_error"] = 100.0 * made.index * errors
     tables = (
-        pl.DataFrame(made),
-        _stack([_coefficients(fit) for fit in fits], columns.period, times),
-        _stack([_describe(fit) for fit in fits], columns.period, times),
-        _outliers(fits, rows, products, labels, columns),
+        pl.DataFrame(index),
+        list_coefficients(fits, times),
+        list_fits(fits, times),
+        _outliers(fits, rows, arrays.products[columns.product][cut], labels, columns),
     )
-    return Hedonics(*(_with_key(arrays, group, table) for table in tables))
+    problem = made.problems[0].labelled(labels.to_list(), where) if made.problems else None
+    return _Made(Hedonics(*(_with_key(arrays, group, table) for table in tables)), problem)
 
 
-def _design(attributes: pl.DataFrame, wanted: _Attributes) -> Design:
-    numbers = {name: attributes[name].to_numpy() for name in wanted.numeric}
-    numbers |= {f"ln {name}": np.log(attributes[name].to_numpy()) for name in wanted.logs}
-    texts = {name: np.array(attributes[name].to_list(), dtype=object) for name in wanted.categorical}
-    return code_attributes(numbers, texts, missing=wanted.missing)
-
-
-def _compile(
-    prices: Array, values: Array | None, design: Design, asked: _Asked
-) -> tuple[Array, Positions, tuple[Hedonic, ...]]:
-    """(T,) index, base 1, and its regressions, with their periods."""
-    if asked.method == "time-dummy":
-        weighing = values if asked.weighted else None
-        fit = time_dummy(prices, weighing, design.columns, design.names, errors=asked.errors, least=asked.least)
-        return fit.index, np.arange(len(prices)), (fit,)
-    assert values is not None
-    made = impute_pairs(
-        prices,
-        values,
-        design.columns,
-        design.names,
-        regressions=asked.regressions,
-        weighted=asked.weighted,
-        errors=asked.errors,
-        least=asked.least,
-    )
-    priced = np.isfinite(made.log_pairs.diagonal())
-    if asked.method == "geks-imputation":
-        logs = window_levels(made.log_pairs, Windows.rolling(len(prices), len(prices)))[0]
-    else:
-        at = np.flatnonzero(priced)
-        logs = np.full(len(prices), np.nan)
-        if asked.form == "direct":
-            logs[at] = made.log_pairs[at[:1], at]
-        else:
-            logs[at[:1]] = 0.0
-            logs[at[1:]] = np.cumsum(made.log_pairs[at[:-1], at[1:]])
-    index: Array = np.exp(logs)
-    return index, made.periods, made.regressions
-
-
-def _coefficients(fit: Hedonic) -> pl.DataFrame:
-    ratios = np.full(len(fit.names), np.nan)
-    np.divide(fit.coefficients, fit.standard_errors, out=ratios, where=fit.standard_errors > 0)
-    return pl.DataFrame(
-        {
-            "name": pl.Series(fit.names, dtype=pl.String),
-            "coefficient": fit.coefficients,
-            "standard_error": fit.standard_errors,
-            "t": ratios,
-        }
-    )
-
-
-def _describe(fit: Hedonic) -> pl.DataFrame:
-    observations = int(fit.observations.sum())
-    unpredicted = int((~np.isfinite(fit.predicted[fit.observations > 0])).any(axis=0).sum())
-    return pl.DataFrame(
-        {
-            "observations": [observations],
-            "left_out": [fit.left_out],
-            "unpredicted": [unpredicted],
-            "parameters": [observations - fit.degrees_of_freedom],
-            "degrees_of_freedom": [fit.degrees_of_freedom],
-            "adjusted_r2": [fit.adjusted_r2],
-            "dropped": pl.Series([list(fit.dropped)], dtype=pl.List(pl.String)),
-        }
+def _told(problems: Sequence[TooFewObservations | UnconnectedPeriods]) -> Exception:
+    """The first problem, with the number of other groups that have one."""
+    first = problems[0]
+    more = f" {len(problems) - 1} more groups fail likewise." if len(problems) > 1 else ""
+    hint = f"{more} With thin 'blank', what cannot be made is left empty and the rest is."
+    if isinstance(first, UnconnectedPeriods):
+        return UnconnectedPeriods(first.groups, first.where, hint=hint)
+    return TooFewObservations(
+        first.observations, first.parameters, first.least, period=first.period, where=first.where, hint=hint
     )
 
 
@@ -332,14 +292,6 @@ def _outliers(
             "standardized_residual": standardized[period, at],
         }
     )
-
-
-def _stack(parts: Sequence[pl.DataFrame], period: str, times: pl.Series | None) -> pl.DataFrame:
-    """The tables of all regressions, with the period of each before it where there is one."""
-    if times is None:
-        return pl.concat(parts)
-    at = np.repeat(np.arange(len(parts)), [part.height for part in parts])
-    return pl.concat([pl.DataFrame({period: times[at]}), pl.concat(parts)], how="horizontal")
 
 
 def _with_key(arrays: PanelArrays, group: int, rows: pl.DataFrame) -> pl.DataFrame:

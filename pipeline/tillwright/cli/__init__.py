@@ -14,8 +14,10 @@ import traceback
 import click
 
 from tillwright import __version__
+from tillwright.cli.hedonics import hedonic_command
 from tillwright.cli.panels import contributions_command, index_command, places_command
-from tillwright.cli.plans import compile_command, intake_command
+from tillwright.cli.plans import compile_command, definitions_command, intake_command
+from tillwright.cli.successions import successions_command
 from tillwright.errors import CallError, DataError, TillwrightError
 
 
@@ -65,5 +67,14 @@ def commands() -> None:
     """
 
 
-for command in (compile_command, intake_command, index_command, places_command, contributions_command):
+for command in (
+    compile_command,
+    intake_command,
+    index_command,
+    places_command,
+    contributions_command,
+    hedonic_command,
+    successions_command,
+    definitions_command,
+):
     commands.add_command(command)

@@ -2,21 +2,25 @@
 
 from __future__ import annotations
 
-import json
-from collections.abc import Callable, Sequence
+from collections.abc import Sequence
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import Any
 
 import click
 
 from tillwright.choices import FORMS, METHODS, ONTO, PLACE_METHODS, SPLICES, UNCONNECTED, Unconnected
-from tillwright.errors import CallError, DataError
-
-if TYPE_CHECKING:
-    import polars as pl
-
-ENDINGS = (".parquet", ".csv", ".json")
-Decorator = Callable[[Callable[..., Any]], Callable[..., Any]]
+from tillwright.cli.options import (
+    Decorator,
+    check_ending,
+    one_or_more,
+    output_options,
+    panel_argument,
+    period_option,
+    read_panel,
+    role_options,
+    together,
+    write_result,
+)
 
 
 class WindowLength(click.ParamType[Any]):
@@ -35,33 +39,6 @@ class WindowLength(click.ParamType[Any]):
         return int(value)
 
 
-def _together(*decorators: Decorator) -> Decorator:
-    def decorate(function: Callable[..., Any]) -> Callable[..., Any]:
-        for one in reversed(decorators):
-            function = one(function)
-        return function
-
-    return decorate
-
-
-_panel = click.argument("panel", type=click.Path(path_type=Path))
-_output = _together(
-    click.option(
-        "--out", type=click.Path(path_type=Path), required=True, help="File to write: .parquet, .csv or .json."
-    ),
-    click.option(
-        "--by", multiple=True, metavar="COLUMN", help="Column that splits the panel, one result each; may be repeated."
-    ),
-)
-_roles = _together(
-    click.option("--product", default="product", show_default=True, metavar="COLUMN"),
-    click.option("--price", default="price", show_default=True, metavar="COLUMN", help="Currency per unit."),
-    click.option("--quantity", default="quantity", show_default=True, metavar="COLUMN", help="Units."),
-    click.option("--json", "as_json", is_flag=True, help="Tell what was written as JSON."),
-)
-_period = click.option(
-    "--period", default="period", show_default=True, metavar="COLUMN", help="Date, 2024-03, 2024-W07 or integer."
-)
 _unconnected = click.option(
     "--unconnected",
     type=click.Choice(UNCONNECTED),
@@ -87,7 +64,7 @@ def _choose(name: str, choices: Sequence[str], default: str, text: str) -> Decor
     )
 
 
-_settings = _together(
+_settings = together(
     click.option(
         "--method",
         type=click.Choice(METHODS),
@@ -122,17 +99,17 @@ _settings = _together(
 
 
 @click.command("index")
-@_panel
+@panel_argument
 @_settings
-@_output
+@output_options
 @_groups
 @click.option(
     "--over",
     metavar="COLUMN",
     help="With --groups: leave out values of this column, such as outlets, instead; prices are compared within them.",
 )
-@_period
-@_roles
+@period_option
+@role_options
 def index_command(
     panel: Path,
     method: tuple[str, ...],
@@ -154,18 +131,18 @@ def index_command(
     """
     from tillwright.api.indexes import indexes
 
-    _check_ending(out)
-    frame = _read_panel(panel, (*by, settings["product"], *([over] if over else [])))
-    result = indexes(frame, _one_or_more(method), groups=groups, over=over, by=by, **_passed_on(settings))
+    check_ending(out)
+    frame = read_panel(panel, (*by, settings["product"], *([over] if over else [])))
+    result = indexes(frame, one_or_more(method), groups=groups, over=over, by=by, **_passed_on(settings))
     told = [name for name in ("method", "form", "window", "splice", "onto") if name in result.columns]
     series = result.select(*by, *told).n_unique() if by or told else 1
     facts = {"series": series, "empty": result["index"].null_count()}
-    _write(result, out, as_json=as_json, method=_one_or_more(method), **facts)
+    write_result(result, out, as_json=as_json, method=one_or_more(method), **facts)
     return 0
 
 
 @click.command("places")
-@_panel
+@panel_argument
 @click.option(
     "--method", type=click.Choice(PLACE_METHODS), required=True, multiple=True, help="Method. May be repeated."
 )
@@ -176,10 +153,10 @@ def index_command(
     metavar="PLACE",
     help="Place that is 100; of several, their geometric mean.  [default: all places]",
 )
-@_output
+@output_options
 @_groups
 @_unconnected
-@_roles
+@role_options
 def places_command(
     panel: Path,
     method: tuple[str, ...],
@@ -203,11 +180,11 @@ def places_command(
     """
     from tillwright.api.places import place_levels
 
-    _check_ending(out)
-    frame = _read_panel(panel, (*by, place, columns["product"]))
+    check_ending(out)
+    frame = read_panel(panel, (*by, place, columns["product"]))
     result = place_levels(
         frame,
-        _one_or_more(method),
+        one_or_more(method),
         place=place,
         base=list(base) or None,
         groups=groups,
@@ -216,18 +193,18 @@ def places_command(
         **columns,
     )
     facts = {"places": result[place].n_unique(), "empty": result["level"].null_count()}
-    _write(result, out, as_json=as_json, method=_one_or_more(method), **facts)
+    write_result(result, out, as_json=as_json, method=one_or_more(method), **facts)
     return 0
 
 
 @click.command("contributions")
-@_panel
+@panel_argument
 @click.argument("start")
 @click.argument("end")
 @_settings
-@_output
-@_period
-@_roles
+@output_options
+@period_option
+@role_options
 def contributions_command(
     panel: Path,
     start: str,
@@ -250,59 +227,21 @@ def contributions_command(
     """
     from tillwright.api.contributions import contributions
 
-    _check_ending(out)
-    frame = _read_panel(panel, (*by, settings["product"]))
-    result = contributions(frame, _one_or_more(method), start, end, by=by, **_passed_on(settings))
+    check_ending(out)
+    frame = read_panel(panel, (*by, settings["product"]))
+    result = contributions(frame, one_or_more(method), start, end, by=by, **_passed_on(settings))
     missing = result.filter(result["status"] == "missing").height
-    _write(result, out, as_json=as_json, method=_one_or_more(method), start=start, end=end, missing=missing)
+    write_result(result, out, as_json=as_json, method=one_or_more(method), start=start, end=end, missing=missing)
     return 0
-
-
-def _one_or_more(values: Sequence[Any]) -> Any:
-    """A single value by itself, which adds no column to the result."""
-    return values[0] if len(values) == 1 else list(values)
 
 
 def _passed_on(settings: dict[str, Any]) -> dict[str, Any]:
     """The settings of an index as the functions take them."""
     passed = {
-        name: _one_or_more(value) if name in {"form", "window", "splice", "onto"} else value
+        name: one_or_more(value) if name in {"form", "window", "splice", "onto"} else value
         for name, value in settings.items()
     }
     return passed | {
-        "window": _one_or_more(settings["window"]) if settings["window"] else None,
+        "window": one_or_more(settings["window"]) if settings["window"] else None,
         "weight_period": list(settings["weight_period"]) or None,
     }
-
-
-def _check_ending(out: Path) -> None:
-    if out.suffix.lower() not in ENDINGS:
-        raise CallError(f"--out is '{out}'; its ending says the format and must be one of {', '.join(ENDINGS)}.")
-
-
-def _write(result: pl.DataFrame, out: Path, *, as_json: bool, method: str | list[str], **facts: Any) -> None:
-    from tillwright.store.workspace import write_frame
-
-    write_frame(result, out)
-    if as_json:
-        click.echo(json.dumps({"out": str(out), "method": method, **facts, "rows": result.height}))
-        return
-    named = method if isinstance(method, str) else ", ".join(method)
-    words = {"series": "series", "places": "places", "empty": "levels empty", "missing": "groups missing"}
-    counted = "".join(f"{facts[name]} {word}, " for name, word in words.items() if facts.get(name))
-    click.echo(f"{out}: {named}, {counted}{result.height} rows.")
-
-
-def _read_panel(path: Path, codes: Sequence[str]) -> pl.DataFrame:
-    """A panel file; in a CSV the columns of codes stay text, so that 01.1 and 01.10 remain two."""
-    import polars as pl
-
-    if not path.is_file():
-        raise CallError(f"The panel {path} is not a file.")
-    try:
-        if path.suffix.lower() != ".csv":
-            return pl.read_parquet(path, glob=False)
-        return pl.read_csv(path, infer_schema_length=None, schema_overrides=dict.fromkeys(codes, pl.String))
-    except (OSError, pl.exceptions.PolarsError) as error:
-        reason = str(error).strip().splitlines()[0]
-        raise DataError(f"The panel {path} cannot be read as Parquet, or as CSV if it ends in .csv: {reason}") from None

@@ -1,4 +1,4 @@
-"""Commands that work on a plan: compile and intake."""
+"""Commands that work on a plan: compile, intake and definitions."""
 
 from __future__ import annotations
 
@@ -73,6 +73,34 @@ def intake_command(plan: Path, work: Path | None, memory: str, direct: bool, as_
 
     request = Request(plan, work, None, memory, "intake", _orchestrator(direct))
     return _carry_out(request, summarise_intake, as_json=as_json)
+
+
+@click.command("definitions")
+@click.argument("plan", type=click.Path(path_type=Path))
+@click.option("--work", type=click.Path(path_type=Path), help="Workspace folder.  [default: work/ beside the plan]")
+@click.option("--json", "as_json", is_flag=True, help="Print every score as JSON.")
+def definitions_command(plan: Path, work: Path | None, as_json: bool) -> int:
+    """Score definitions of products on what was compiled: homogeneous, and yet lasting.
+
+    Items, their attributes and combinations of these (products.candidates of the plan, or pairs) are compared for every
+    elementary aggregate. Writes the tables definitions and definition_scores, and changes nothing else.
+
+    \b
+    Example:
+        tillwright definitions sample_parquet/plan.toml
+    """
+    from rich.console import Console
+
+    from tillwright.report.definitions import render
+    from tillwright.stages.compiling import Request, workspace_of
+    from tillwright.stages.definitions import assess_definitions
+
+    scores = assess_definitions(plan, workspace_of(Request(plan, work)))
+    if as_json:
+        click.echo(json.dumps(scores.to_dicts(), ensure_ascii=False, indent=2))
+    else:
+        click.echo(render(scores, Console(highlight=False, width=None if sys.stdout.isatty() else 120)))
+    return 0
 
 
 def _orchestrator(direct: bool) -> str:

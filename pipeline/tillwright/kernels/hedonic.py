@@ -159,6 +159,7 @@ def impute_pairs(
     weighted: bool = True,
     errors: Errors = "classical",
     least: int = LEAST_OBSERVATIONS,
+    thin: list[TooFewObservations] | None = None,
 ) -> Imputed:
     """(T, T) log double-imputation Törnqvist levels of period t (column) relative to period s (row).
 
@@ -175,6 +176,8 @@ def impute_pairs(
     regressions : "period" predicts from a cross-section in each period, "pooled" from one time dummy
         regression over all T, whose coefficients stay the same.
     weighted : whether regressions are weighted by expenditure shares; the index always is.
+    thin : collects periods with too few prices for their cross-section, in which nothing counts as sold then;
+        None = raise.
 
     Returns
     -------
@@ -195,10 +198,11 @@ def impute_pairs(
         predicted = fits[0].predicted
     else:
         fits, predicted = [], np.full(prices.shape, np.nan)
-        periods = np.flatnonzero((np.where(np.isfinite(prices), quantities, 0.0) > 0).any(axis=1))
-        if len(periods) == 0:
+        sold = np.flatnonzero((np.where(np.isfinite(prices), quantities, 0.0) > 0).any(axis=1))
+        if len(sold) == 0:
             raise TooFewObservations(0, 0, least)
-        for row in periods:
+        few = []
+        for row in sold:
             here = slice(row, row + 1)
             try:
                 fit = time_dummy(
@@ -210,9 +214,18 @@ def impute_pairs(
                     least=least,
                 )
             except TooFewObservations as error:
-                raise TooFewObservations(error.observations, error.parameters, error.least, period=int(row)) from None
+                problem = TooFewObservations(error.observations, error.parameters, error.least, period=int(row))
+                if thin is None:
+                    raise problem from None
+                thin.append(problem)
+                few.append(row)
+                continue
             fits.append(fit)
             predicted[here] = fit.predicted
+        periods = np.setdiff1d(sold, few).astype(np.intp)
+        if few:
+            prices = prices.copy()
+            prices[few] = np.nan
     return Imputed(_log_pairs(prices, quantities, predicted), periods, tuple(fits))
 
 

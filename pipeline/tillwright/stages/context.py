@@ -9,7 +9,7 @@ from datetime import UTC, date, datetime
 import polars as pl
 
 from tillwright.periods import label_period, list_periods, next_period
-from tillwright.plan import Plan
+from tillwright.plan import Definition, Plan
 from tillwright.queries import Connection, Resources, connect, offer
 from tillwright.store.references import References
 from tillwright.store.workspace import Workspace
@@ -45,6 +45,11 @@ class Context:
         """Make the parts of some deliveries readable under a name; those that there are none of are left out."""
         parts = [path for path in self.workspace.parts(table, deliveries) if path.exists()]
         offer(connection, called, parts or pl.DataFrame(schema=TABLES[table].columns))
+
+    def definition(self, ea: str | None) -> Definition:
+        """What makes items of an elementary aggregate one product; None = items that none is assigned to."""
+        tree = self.references.tree
+        return self.plan.products.definition(tree.ancestry(ea) if ea in tree.parents and ea is not None else [])
 
     def label(self, period: date) -> str:
         """A period as people write it."""

@@ -2,17 +2,22 @@
 
 from __future__ import annotations
 
-from collections.abc import Collection
+from collections.abc import Collection, Sequence
+from dataclasses import dataclass
 
 import numpy as np
 import polars as pl
 
+from tillwright.errors import TooFewObservations, UnconnectedPeriods
 from tillwright.kernels.churn import measure_churn
+from tillwright.kernels.filtered_chain import chain_links
 from tillwright.kernels.methods import Failure, make_indexes
+from tillwright.kernels.network import Flags
 from tillwright.kernels.recipes import Recipe, Years
-from tillwright.panels import Array, Block, to_arrays
+from tillwright.panels import Array, Block, PanelArrays, to_arrays
 from tillwright.periods import year_and_month
 from tillwright.stages.context import Context
+from tillwright.stages.hedonics import Adjusted, Adjustment, adjust, find_adjustments, write_diagnostics
 from tillwright.stages.intake import answers
 
 
@@ -21,34 +26,72 @@ def compile_indexes(context: Context) -> int:
 
     An elementary aggregate that no index can be made of is a row of `failures`; the others go on.
     """
-    kept = context.workspace.read("screened").filter(pl.col("verdict") == "kept")
     periods = context.periods()["period"]
-    arrays = to_arrays(
-        kept,
+    adjusted: list[Adjusted] = []
+    groups = index_groups(context, context.workspace.read("screened"), adjusted)
+    failed = [(*group.key, group.message) for group in groups if group.message]
+    failed += _empty_leaves(context, periods, {group.key[0] for group in groups})
+    made = [_series(group.block, group.index, str(group.way), periods) for group in groups if group.index is not None]
+    context.workspace.write("ea_indexes", pl.concat(made) if made else pl.DataFrame(schema=_EMPTY))
+    context.workspace.write("failures", _failures(failed, context))
+    write_diagnostics(context, adjusted)
+    return len(made)
+
+
+@dataclass(frozen=True, slots=True)
+class Group:
+    """One elementary aggregate and stratum: its panel, how its index is made, the index, and what is wrong with it."""
+
+    block: Block
+    way: Recipe | Adjustment
+    index: Array | None
+    message: str
+
+    @property
+    def key(self) -> tuple[str, str]:
+        """Its elementary aggregate and stratum."""
+        return str(self.block.key[0]), str(self.block.key[1])
+
+
+def index_groups(context: Context, screened: pl.DataFrame, adjusted: list[Adjusted]) -> list[Group]:
+    """Every group of a screened panel with its index, base 1; `adjusted` collects those made hedonically.
+
+    Prices that were kept make an index, and those imputed, which only groups compiled by elementary formulas have.
+    """
+    periods = context.periods()["period"]
+    used = screened.filter(pl.col("verdict") != "excluded")
+    arrays, groups = _code(used, "quantity", periods), []
+    linked = (
+        None if used["linked"].all() else _code(used.with_columns(pl.col("linked").cast(pl.Int8)), "linked", periods)
+    )
+    for block, cut, adjustment in zip(arrays, arrays.cuts, find_adjustments(context, arrays), strict=True):
+        way = adjustment or context.plan.index.recipe(context.references.tree.ancestry(str(block.key[0])))
+        left_out = None if linked is None or linked.values is None else linked.values[:, cut] == 0
+        groups.append(Group(block, way, *_try_index(block, way, left_out, context, periods, adjusted)))
+    return groups
+
+
+def _code(rows: pl.DataFrame, value: str, periods: pl.Series) -> PanelArrays:
+    return to_arrays(
+        rows,
         by=("ea", "stratum"),
         product="product",
         period="period",
         price="price",
-        value="quantity",
+        value=value,
         periods=periods,
     )
-    made, failed = [], []
-    for block in arrays:
-        ea, stratum = str(block.key[0]), str(block.key[1])
-        recipe = context.plan.index.recipe(context.references.tree.ancestry(ea))
-        index, message = _try_index(block, recipe, context, periods)
-        if message:
-            failed.append((ea, stratum, message))
-        if index is not None:
-            made.append(_series(block, index, recipe, periods))
-    failed += _empty_leaves(context, periods, {ea for ea, _ in arrays.keys.iter_rows()})
-    context.workspace.write("ea_indexes", pl.concat(made) if made else pl.DataFrame(schema=_EMPTY))
-    context.workspace.write("failures", _failures(failed, context))
-    return len(made)
 
 
-def _try_index(block: Block, recipe: Recipe, context: Context, periods: pl.Series) -> tuple[Array | None, str]:
-    """The index, if one can be made, and what is wrong with it, if anything is.
+def _try_index(
+    block: Block,
+    way: Recipe | Adjustment,
+    left_out: Flags | None,
+    context: Context,
+    periods: pl.Series,
+    adjusted: list[Adjusted],
+) -> tuple[Array | None, str]:
+    """The index, if one can be made, and what is wrong with it, if anything is; one made hedonically joins `adjusted`.
 
     Windows that fall apart are passed over; what is made of others stands.
     """
@@ -56,13 +99,24 @@ def _try_index(block: Block, recipe: Recipe, context: Context, periods: pl.Serie
     assert quantities is not None
     priced = np.flatnonzero(np.isfinite(prices).any(axis=1))
     cut = slice(int(priced[0]), int(priced[-1]) + 1)
-    failures: list[Failure] = []
     index, message = np.full(len(prices), np.nan), ""
-    years = _link_years(context, periods[cut.start : cut.stop])
-    index[cut] = make_indexes(prices[cut], quantities[cut], [recipe], years=years, failures=failures)[0, 0]
-    if failures:
-        labels = [context.label(day) for day in periods[cut.start : cut.stop]]
-        message = str(failures[0].reason.labelled(labels, f"{block.key[0]} {block.key[1]}".strip()))
+    span = periods[cut.start : cut.stop]
+    years = _link_years(context, span)
+    problems: Sequence[UnconnectedPeriods | TooFewObservations]
+    if isinstance(way, Recipe) and way.is_bilateral and way.form == "chained" and left_out is not None:
+        index[cut], problems = chain_links(prices[cut], quantities[cut], way.method, left_out[cut]), []
+    elif isinstance(way, Recipe):
+        failures: list[Failure] = []
+        index[cut] = make_indexes(prices[cut], quantities[cut], [way], years=years, failures=failures)[0, 0]
+        problems = [failure.reason for failure in failures]
+    else:
+        key = (str(block.key[0]), str(block.key[1]))
+        adjusted.append(adjust(prices[cut], quantities[cut], way, periods=span, years=years, key=key))
+        index[cut], problems = adjusted[-1].index, adjusted[-1].problems
+    if problems:
+        labels = [context.label(day) for day in span]
+        more = f" {len(problems) - 1} more of its periods or windows fail likewise." if len(problems) > 1 else ""
+        message = str(problems[0].labelled(labels, f"{block.key[0]} {block.key[1]}".strip(), more))
     gaps = np.flatnonzero(~np.isfinite(index))
     if gaps.size and not message:
         first, last = context.label(periods[int(gaps[0])]), context.label(periods[int(gaps[-1])])
@@ -97,10 +151,12 @@ def _empty_leaves(context: Context, periods: pl.Series, compiled: Collection[str
     return failed
 
 
-def _series(block: Block, index: Array, recipe: Recipe, periods: pl.Series) -> pl.DataFrame:
+def _series(block: Block, index: Array, method: str, periods: pl.Series) -> pl.DataFrame:
     assert block.values is not None
-    turnover = block.prices * block.values
-    churn = measure_churn(block.prices, turnover)
+    sold = np.where(block.values > 0, block.prices, np.nan)
+    imputed = np.isfinite(block.prices) & (block.values == 0)
+    turnover = sold * block.values
+    churn = measure_churn(sold, turnover)
     movement = np.full(len(index), np.nan)
     movement[1:] = index[1:] / index[:-1]
     frame = pl.DataFrame(
@@ -116,12 +172,13 @@ def _series(block: Block, index: Array, recipe: Recipe, periods: pl.Series) -> p
             "matched_share": churn.matched_share,
             "entering_share": churn.entering_share,
             "exiting_share": churn.exiting_share,
+            "imputed": imputed.sum(axis=1),
         }
     ).with_columns(pl.col(pl.Float64).fill_nan(None))
     return frame.select(
         pl.lit(str(block.key[0])).alias("ea"),
         pl.lit(str(block.key[1])).alias("stratum"),
-        pl.lit(str(recipe)).alias("method"),
+        pl.lit(method).alias("method"),
         pl.all(),
     )
 
@@ -140,6 +197,6 @@ _EMPTY = {
     "period": pl.Date,
     "method": pl.String,
     **dict.fromkeys(("level", "movement", "turnover"), pl.Float64),
-    **dict.fromkeys(("products", "matched", "entering", "exiting"), pl.Int64),
+    **dict.fromkeys(("products", "matched", "entering", "exiting", "imputed"), pl.Int64),
     **dict.fromkeys(("matched_share", "entering_share", "exiting_share"), pl.Float64),
 }

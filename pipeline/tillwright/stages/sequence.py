@@ -13,13 +13,16 @@ import polars as pl
 from tillwright.errors import UnreadableDeliveries
 from tillwright.plan import Feed
 from tillwright.stages.aggregation import aggregate_headings
+from tillwright.stages.churning import assess_churn
 from tillwright.stages.context import Context
-from tillwright.stages.identity import identify
+from tillwright.stages.effects import measure_effects
+from tillwright.stages.identity import define_products, list_items
 from tillwright.stages.indexes import compile_indexes
 from tillwright.stages.intake import Delivery, announced_period, check_gates, find_active, part_files, settle, take_in
 from tillwright.stages.keyed import Run, StepResult, Work, perform
 from tillwright.stages.panel import make_panel
 from tillwright.stages.screening import screen
+from tillwright.stages.successions import find_successions
 from tillwright.store.deliveries import hash_file
 
 # A batch is one task of the orchestrator: small files together, a large one alone.
@@ -71,10 +74,26 @@ def compile_steps(run: Run, deliveries: Sequence[Delivery]) -> list[Step]:
     context = run.context
     return [
         *intake_steps(run, deliveries),
-        _table_step(run, "identity", lambda: _identity_inputs(context), ["items", "products"], identify),
+        _table_step(run, "items", lambda: _item_inputs(context), ["items"], list_items),
+        _table_step(
+            run,
+            "successions",
+            lambda: _succession_inputs(run),
+            ["successions"],
+            lambda context: find_successions(context, run.ledger.decisions()),
+        ),
+        _table_step(run, "products", lambda: _product_inputs(context), ["products"], define_products),
         _table_step(run, "panel", lambda: _panel_inputs(context), ["panel"], make_panel),
+        _table_step(run, "churn", lambda: _churn_inputs(context), ["churn", "lives"], assess_churn),
         _table_step(run, "screening", lambda: _screening_inputs(context), ["screened"], screen),
-        _table_step(run, "indexes", lambda: _index_inputs(context), ["ea_indexes", "failures"], compile_indexes),
+        _table_step(
+            run,
+            "indexes",
+            lambda: _index_inputs(context),
+            ["ea_indexes", "failures", "hedonic_coefficients", "hedonic_fit"],
+            compile_indexes,
+        ),
+        _table_step(run, "effects", lambda: _effect_inputs(context), ["screen_effects"], measure_effects),
         _table_step(
             run,
             "aggregation",
@@ -170,19 +189,54 @@ def _gate_inputs(context: Context) -> list[str]:
     ]
 
 
-def _identity_inputs(context: Context) -> list[str]:
-    plan = context.plan
+def _item_inputs(context: Context) -> list[str]:
     masters = hashlib.sha256(context.references.masters.write_csv().encode()).hexdigest()
+    return [*_sold(context, "described"), masters]
+
+
+def _succession_inputs(run: Run) -> list[str]:
+    context = run.context
+    rules = context.plan.successions
+    if rules is None:
+        return []
+    decisions = [str(decision) for decision in run.ledger.decisions()]
     assignment = context.references.assignment.write_csv()
-    return [*_sold(context, "described"), masters, assignment, plan.products.model_dump_json()]
+    sold = [*_sold(context), *_table_hashes(context, "items"), *_span(context)]
+    return [*sold, assignment, rules.model_dump_json(), *decisions]
+
+
+def _product_inputs(context: Context) -> list[str]:
+    plan = context.plan
+    parts = [f"{feed.name} {feed.item_part}" for feed in plan.feed]
+    definition = plan.products.model_dump_json(exclude={"candidates"})
+    tree = str(sorted(context.references.tree.parents.items()))
+    tables = _table_hashes(context, "items", "successions")
+    return [*tables, context.references.assignment.write_csv(), definition, tree, *parts]
 
 
 def _panel_inputs(context: Context) -> list[str]:
     return [*_sold(context), *_table_hashes(context, "products"), *_span(context)]
 
 
+def _churn_inputs(context: Context) -> list[str]:
+    tables = _table_hashes(context, "products", "panel")
+    return [*_sold(context), *tables, *_span(context), str(context.plan.weights.link_month)]
+
+
 def _screening_inputs(context: Context) -> list[str]:
-    return [*_table_hashes(context, "panel"), context.plan.screening.model_dump_json()]
+    return [
+        *_table_hashes(context, "panel"),
+        *_span(context),
+        context.plan.screening.model_dump_json(),
+        *(_way_inputs(context) if context.plan.screening.imputation != "off" else []),
+    ]
+
+
+def _way_inputs(context: Context) -> list[str]:
+    """What decides how each elementary aggregate is compiled."""
+    tree = str(sorted(context.references.tree.parents.items()))
+    choices = [choice.model_dump_json() for choice in context.plan.hedonic]
+    return [context.plan.index.model_dump_json(), *choices, tree]
 
 
 def _index_inputs(context: Context) -> list[str]:
@@ -193,9 +247,31 @@ def _index_inputs(context: Context) -> list[str]:
         context.references.weights.write_csv(),
         context.references.outside.write_csv(),
         context.plan.index.model_dump_json(),
+        *_hedonic_inputs(context),
         str(context.plan.weights.link_month),
         tree,
         *_answers(context),
+    ]
+
+
+def _effect_inputs(context: Context) -> list[str]:
+    screening = context.plan.screening
+    tables = _table_hashes(context, "screened", "ea_indexes")
+    if not screening.on:
+        return tables
+    link_month = str(context.plan.weights.link_month)
+    return [*tables, *_screening_inputs(context), *_way_inputs(context), *_hedonic_inputs(context), link_month]
+
+
+def _hedonic_inputs(context: Context) -> list[str]:
+    """What aggregates that are adjusted for quality rest on besides their prices; nothing without any."""
+    if not context.plan.hedonic:
+        return []
+    choices = [choice.model_dump_json() for choice in context.plan.hedonic]
+    return [
+        *choices,
+        context.plan.products.model_dump_json(exclude={"candidates"}),
+        *_table_hashes(context, "items", "products"),
     ]
 
 

@@ -9,13 +9,13 @@ import json
 import re
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
-from datetime import UTC, datetime
 from pathlib import Path
 from typing import Self
 
 import duckdb
 
 from tillwright.errors import DataError, WorkspaceBusy
+from tillwright.store.decisions import Decision, now
 
 _SCHEMA = """
 create table if not exists arrivals (
@@ -30,6 +30,10 @@ create table if not exists runs (
 create table if not exists steps (
     run bigint not null, step text not null, key text not null, state text not null,
     rows bigint, seconds double, outputs text, finished timestamp not null
+);
+create table if not exists decisions (
+    feed text not null, old_item text not null, new_item text not null, verdict text not null,
+    decided_by text not null, why text not null, decided timestamp not null
 );
 """
 
@@ -101,7 +105,7 @@ class Ledger:
                     "arrival": arrival.arrival,
                     "bytes": arrival.bytes,
                     "modified": arrival.modified,
-                    "now": _now(),
+                    "now": now(),
                 },
             )
 
@@ -111,7 +115,7 @@ class Ledger:
         run = int(row[0]) if row else 1
         self._connection.execute(
             "insert into runs values ($run, $now, null, $plan, $sha, $code, $orchestrator, null)",
-            {"run": run, "now": _now(), "plan": plan, "sha": plan_sha256, "code": code, "orchestrator": orchestrator},
+            {"run": run, "now": now(), "plan": plan, "sha": plan_sha256, "code": code, "orchestrator": orchestrator},
         )
         return run
 
@@ -119,7 +123,7 @@ class Ledger:
         """Record how a run ended."""
         self._connection.execute(
             "update runs set finished = $now, outcome = $outcome where run = $run",
-            {"now": _now(), "outcome": outcome, "run": run},
+            {"now": now(), "outcome": outcome, "run": run},
         )
 
     def finished_step(self, step: str, key: str) -> Mapping[str, Stamp] | None:
@@ -148,16 +152,35 @@ class Ledger:
                 "rows": rows,
                 "seconds": seconds,
                 "outputs": json.dumps(stamps),
-                "now": _now(),
+                "now": now(),
             },
         )
+
+    def decisions(self) -> list[Decision]:
+        """Every decision on a succession, in the order in which they were taken."""
+        rows = self._connection.execute(
+            "select feed, old_item, new_item, verdict, decided_by, why, decided from decisions order by decided, rowid"
+        ).fetchall()
+        return [Decision(*row) for row in rows]
+
+    def decide(self, decisions: Iterable[Decision]) -> None:
+        """Record decisions; none is ever changed, the last on a pair stands."""
+        for one in decisions:
+            self._connection.execute(
+                "insert into decisions values ($feed, $old, $new, $verdict, $by, $why, $at)",
+                {
+                    "feed": one.feed,
+                    "old": one.old_item,
+                    "new": one.new_item,
+                    "verdict": one.verdict,
+                    "by": one.by,
+                    "why": one.why,
+                    "at": one.at,
+                },
+            )
 
     def steps_of(self, run: int) -> list[tuple[str, str]]:
         """Name and state of every step of a run, in order."""
         return self._connection.execute(
             "select step, state from steps where run = $run order by finished, rowid", {"run": run}
         ).fetchall()
-
-
-def _now() -> datetime:
-    return datetime.now(UTC).replace(tzinfo=None)

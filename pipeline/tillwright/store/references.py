@@ -12,6 +12,7 @@ from pathlib import Path
 
 import polars as pl
 
+from tillwright.choices import IMPUTED_METHODS
 from tillwright.errors import PlanError, PlanProblem
 from tillwright.periods import parse_period
 from tillwright.plan import Plan
@@ -92,6 +93,7 @@ def _read_references(plan: Plan, problems: list[PlanProblem], told: set[str]) ->
         return None
     problems += _override_problems(tree, plan)
     problems += _mixed_problems(assignment, outside, plan)
+    problems += _imputation_problems(tree, outside, plan)
     for optional in ("feed", "category", "item"):
         if optional not in assignment.columns:
             assignment = assignment.with_columns(_NO_TEXT.alias(optional))
@@ -219,10 +221,16 @@ def _heading_problems(headings: pl.DataFrame) -> Iterator[PlanProblem]:
 
 
 def _override_problems(tree: Tree, plan: Plan) -> Iterator[PlanProblem]:
-    for number, override in enumerate(plan.index.override if plan.has("index") else ()):
-        if override.heading not in tree.parents:
-            allowed = f"a heading of {plan.classification.headings}"
-            yield PlanProblem(f"index.override.{number}.heading", repr(override.heading), allowed)
+    overrides: list[tuple[str, str]] = []
+    for section in ("index", "products"):
+        if plan.has(section):
+            named = enumerate(getattr(plan, section).override)
+            overrides += [(f"{section}.override.{number}.heading", one.heading) for number, one in named]
+    if plan.has("hedonic"):
+        overrides += [(f"hedonic.{number}.heading", one.heading) for number, one in enumerate(plan.hedonic)]
+    for key, heading in overrides:
+        if heading not in tree.parents:
+            yield PlanProblem(key, repr(heading), f"a heading of {plan.classification.headings}")
 
 
 def _mixed_problems(assignment: pl.DataFrame, outside: pl.DataFrame, plan: Plan) -> Iterator[PlanProblem]:
@@ -233,6 +241,16 @@ def _mixed_problems(assignment: pl.DataFrame, outside: pl.DataFrame, plan: Plan)
         yield PlanProblem("outside_series.file", f"heading {', '.join(both[:5])}", allowed)
     if outside.height and plan.has("weights") and plan.weights.source == "turnover":
         yield PlanProblem("weights.source", "'turnover'", "'file' beside outside series, which have no turnover")
+
+
+def _imputation_problems(tree: Tree, outside: pl.DataFrame, plan: Plan) -> Iterator[PlanProblem]:
+    """Imputation that nothing can use: what a plan asks for and does not get must not go unnoticed."""
+    if not plan.has("screening", "index", "hedonic") or plan.screening.imputation == "off":
+        return
+    compiled = set(tree.leaves) - set(outside["heading"])
+    if not any(plan.elementary_formula(tree.ancestry(leaf)) for leaf in compiled):
+        allowed = f"'off' unless an elementary aggregate is compiled by {', '.join(IMPUTED_METHODS)}"
+        yield PlanProblem("screening.imputation", "on, and no aggregate can use it", allowed)
 
 
 def _is_circular(parents: dict[str, str], heading: str) -> bool:
