@@ -129,3 +129,9 @@ def test_missing_columns_are_named_together_with_those_present() -> None:
     assert told.value.missing == ("ea", "period", "price", "quantity")
     assert told.value.present == ("product", "cost")
     assert "'cost'" in str(told.value)
+
+
+def test_an_empty_panel_has_no_groups() -> None:
+    empty = arrays(pl.DataFrame(GOOD).clear())
+    assert list(empty) == []
+    assert empty.cuts == []

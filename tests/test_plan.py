@@ -241,6 +241,7 @@ SENSELESS: list[tuple[str, dict[str, Any]]] = [
     ),
     ("successions.ask", changed(successions={"accept": 0.7, "ask": 0.8})),
     ("products.by", changed(products={"by": ["fat"]})),
+    ("products.by", changed(products={"by": []})),
     ("products.by", changed(products={"by": ["item", "brand"]})),
     ("products.override.0.by", changed(products={"override": [{"heading": "01", "by": ["colour"]}]})),
     ("products.override.0.heading", changed(products={"override": [{"heading": "X", "by": ["brand"]}]})),

@@ -52,7 +52,7 @@ class PanelArrays:
     @property
     def ends(self) -> NDArray[np.intp]:
         """(B,) the columns after the last ones of the groups."""
-        return np.append(self.starts[1:], self.prices.shape[1])
+        return np.append(self.starts, self.prices.shape[1])[1:]
 
     @property
     def cuts(self) -> list[slice]:

@@ -51,9 +51,9 @@ def examine_plan(path: Path) -> tuple[Plan, list[PlanProblem]]:
         plan = Plan.model_validate({**raw, "source": path.resolve()})
     except ValidationError as error:
         details = error.errors()
-        inner = {detail["loc"][0] for detail in details if len(detail["loc"]) > 1}
+        inner = {detail["loc"][:depth] for detail in details for depth in range(len(detail["loc"]))}
         # A section whose members are wrong is also told to be too short, since they do not count.
-        told = [_problem(d) for d in details if not (d["type"] == "too_short" and d["loc"][0] in inner)]
+        told = [_problem(d) for d in details if not (d["type"] == "too_short" and d["loc"] in inner)]
         problems += _joined(told)
         wrong = {str(detail["loc"][0]) for detail in details}
         plan = Plan.model_construct(source=path.resolve(), **{name: _salvage(raw, name, wrong) for name in SECTIONS})

@@ -23,8 +23,7 @@ KINDS = (
 IN_MILLILITRES = frozenset({"shampoo", "fabric softener", "nectar", "dishwashing liquid", "hand cream"})
 PACKS = (150.0, 200.0, 300.0, 400.0, 500.0)
 
-# Four months and a geometric rest of 26 on average: 27 % of the codes live less than a year, as in food retailing,
-# where a fourth to a third does.
+# Three months and a geometric rest of 26 on average: 27 % of the codes live less than a year; a third is common.
 SHORTEST_LIFE, MEAN_REST = 4, 26
 # How a life ends. Three in ten of the codes that go come back under a new one, half of them with less in the pack.
 # That is up to 6 % of the shelf a year in smaller packs: many, as in years of rising costs.
@@ -44,7 +43,7 @@ CLEARED, CLEARED_OLD = 0.6, 0.15
 CLEARANCE_PRICE, CLEARANCE_QUANTITY, LEFT_OVER = (0.45, 0.6), (0.15, 0.45), 0.5
 # Items of one brand have one price line: a sister flavour costs what its sister cost within 5 %.
 LINE_PRICE = 0.05
-# Best sellers sell some ten times what the slowest do: log standard deviation 0.6, 95 % within a factor of 10.6.
+# Best sellers sell some ten times what the slowest do: 95 % lie within a factor of exp(4 · 0.6) = 11.
 POPULARITY, RELAUNCHED_POPULARITY = 0.6, 0.2
 
 

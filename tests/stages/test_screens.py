@@ -14,6 +14,7 @@ import polars as pl
 import pytest
 
 from tests.stages.sold import JEVONS, Floats, Months, compile_sold, levels, random_months, reasons, sold
+from tillwright.report.summary import summarise_compile
 from tillwright.stages.screening import KEY, screen_panel
 from tillwright.tables import TABLES
 
@@ -38,6 +39,14 @@ def test_sale_before_a_product_goes_is_clearance(tmp_path: Path) -> None:
     }
     found = reasons(compile_sold(tmp_path, milk, screening=CLEARANCE))
     assert found == {"CLEARED": {3: "clearance", 4: "clearance"}, "LAST": {5: "clearance"}}
+
+
+def test_product_that_is_back_was_not_sold_off(tmp_path: Path) -> None:
+    seasonal: Months = [(10.0, 100.0), (10.0, 100.0), (6.0, 40.0), None, None]
+    milk: dict[str, Months] = {"STAYS": STEADY, "SEASONAL": seasonal}
+    assert reasons(compile_sold(tmp_path / "gone", milk, screening=CLEARANCE)) == {"SEASONAL": {3: "clearance"}}
+    back = milk | {"SEASONAL": [*seasonal, (10.0, 100.0)]}
+    assert not reasons(compile_sold(tmp_path / "back", back, screening=CLEARANCE))
 
 
 def test_clearance_takes_its_limits_from_the_plan(tmp_path: Path) -> None:
@@ -248,7 +257,7 @@ def test_table_is_the_panel_with_imputed_rows_that_sold_nothing(tmp_path: Path) 
     observed = screened.filter(pl.col("verdict") != "imputed")
     assert observed.select(panel.columns).equals(panel)
     imputed = screened.filter(verdict="imputed")
-    assert imputed.height > 0
+    assert imputed.height == summarise_compile(compiled.context, compiled.steps).imputed > 0
     assert imputed.select(pl.sum("quantity", "turnover", "lines")).row(0) == (0, 0, 0)
     assert imputed["price"].is_between(0, 1e4, closed="none").all()
     verdicts = screened.select(kept=pl.col("verdict") == "kept", silent=pl.col("reason") == "")

@@ -64,6 +64,7 @@ class Summary:
     idle_answers: tuple[str, ...]
     methods: dict[str, int]
     excluded: dict[str, int]
+    imputed: int
     all_items: tuple[PeriodSummary, ...]
     rounding: int
     steps: int
@@ -93,6 +94,7 @@ def summarise_intake(context: Context, steps: Sequence[StepResult]) -> Summary:
         idle_answers=(),
         methods={},
         excluded={},
+        imputed=0,
         all_items=(),
         rounding=context.plan.release.rounding,
         steps=len(steps),
@@ -119,6 +121,7 @@ def summarise_compile(context: Context, steps: Sequence[StepResult]) -> Summary:
         idle_answers=_idle_answers(context, gates, failures),
         methods=dict(methods.iter_rows()),
         excluded=dict(excluded.iter_rows()),
+        imputed=screened.filter(pl.col("verdict") == "imputed").height,
         all_items=_all_items(context),
         rounding=context.plan.release.rounding,
         steps=len(steps),

@@ -118,6 +118,8 @@ def _methods(summary: Summary) -> Table:
         table.add_row(method, str(count))
     for reason, count in summary.excluded.items():
         table.add_row(f"unit values set aside: {reason}", str(count))
+    if summary.imputed:
+        table.add_row("prices imputed", str(summary.imputed))
     return table
 
 

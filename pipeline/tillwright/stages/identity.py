@@ -92,7 +92,8 @@ def _fact(name: str) -> pl.Expr:
     """A column of `items`, or an attribute of the item master, as text."""
     if name in ITEM_FACTS:
         return pl.col(name)
-    return pl.col("attributes").str.json_path_match(f"$['{name}']")
+    told = pl.col("attributes").str.json_path_match(f"$['{name}']").str.strip_chars()
+    return pl.when(told != "").then(told)
 
 
 def _follow(items: pl.DataFrame, successions: pl.DataFrame) -> pl.DataFrame:

@@ -4,8 +4,8 @@ Nothing is deleted.  The screens work one after the other, each on what those be
 carries the first reason that applies: no net sales, an extreme relative, clearance, small sales.  What
 is then missing is imputed, where the plan says so.
 
-Whether a product has gone, and whether it sells enough, is only known with the period after: a further
-period can change verdicts of the last `clearance.ahead` periods, and of the last one, and so their indexes.
+Verdicts on clearance and small sales rest on later periods too: a further one can change those of the last
+`ahead` periods, of the last period, and of a product that is back after it seemed to be sold off.
 """
 
 from __future__ import annotations

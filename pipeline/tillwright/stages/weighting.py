@@ -7,7 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 import polars as pl
 
-from tillwright.errors import CallError
+from tillwright.errors import CallError, DataError
 from tillwright.kernels.chaining import WeightYear
 from tillwright.panels import Array
 from tillwright.periods import year_and_month
@@ -67,6 +67,8 @@ def _weights(context: Context, components: Components, year: int, turnover: pl.D
     The first year, before which nothing is known, takes its own turnover.
     """
     known = sorted(set(turnover["year"]))
+    if not known:
+        raise DataError("No unit value was kept, so there is nothing to weigh; look at the verdicts in `screened`.")
     source = year - 1 if year - 1 in known else min(known, key=lambda candidate: abs(candidate - year))
     rows = turnover.filter(pl.col("year") == source)
     sold = {(ea, stratum): value for ea, stratum, value in rows.select("ea", "stratum", "turnover").iter_rows()}
