@@ -10,11 +10,8 @@ from tillwright.errors import TooFewObservations, UnconnectedPeriods
 from tillwright.kernels.attributes import Design
 from tillwright.kernels.geks import window_levels
 from tillwright.kernels.hedonic import LEAST_OBSERVATIONS, Errors, Hedonic, Regressions, impute_pairs, time_dummy
-from tillwright.kernels.network import Flags
-from tillwright.kernels.pairs import Array, Positions
-from tillwright.kernels.recipes import Recipe, Years, known, links_of, windows_of
-from tillwright.kernels.splicing import splice
-from tillwright.kernels.windows import Windows
+from tillwright.kernels.pairs import Array
+from tillwright.kernels.recipes import Recipe, Years, join_windows, links_for, priced_periods, windows_of
 
 TIME_DUMMY, IMPUTATION, GEKS_IMPUTATION = "time-dummy", "imputation", "geks-imputation"
 
@@ -104,9 +101,9 @@ def make_series(
     if recipe.method == IMPUTATION:
         index = np.exp(_compare(made.log_pairs, recipe.form))
     else:
-        links = _links(prices, quantities, recipe, years)
+        links = links_for(recipe, prices, quantities, years)
         windows = windows_of(recipe, len(prices), links)
-        index = _join(window_levels(made.log_pairs, windows, apart=apart), windows, recipe, links)
+        index = join_windows(window_levels(made.log_pairs, windows, apart=apart), windows, recipe, links)
     return HedonicSeries(index, made.regressions, spans, (*thin, *apart))
 
 
@@ -118,7 +115,7 @@ def _dummies(
     regressing: Regressing,
     years: Years | None,
 ) -> HedonicSeries:
-    links = _links(prices, quantities, recipe, years)
+    links = links_for(recipe, prices, quantities, years)
     windows = windows_of(recipe, len(prices), links)
     weighing = quantities if regressing.weighted else None
     levels = np.full((len(windows.skipped), windows.length), np.nan)
@@ -126,7 +123,7 @@ def _dummies(
     for row, skipped in enumerate(windows.skipped):
         start, end = row - windows.before + int(skipped), row - windows.before + windows.length
         if end - start == 1 < len(prices):
-            levels[row, skipped:] = np.where(_priced(prices, quantities)[start:end], 0.0, np.nan)
+            levels[row, skipped:] = np.where(priced_periods(prices, quantities)[start:end], 0.0, np.nan)
             continue
         try:
             fit = time_dummy(
@@ -143,7 +140,7 @@ def _dummies(
         levels[row, skipped:] = np.log(fit.index)
         fits.append(fit)
         spans.append((start, end))
-    return HedonicSeries(_join(levels, windows, recipe, links), tuple(fits), tuple(spans), tuple(thin))
+    return HedonicSeries(join_windows(levels, windows, recipe, links), tuple(fits), tuple(spans), tuple(thin))
 
 
 def _compare(log_pairs: Array, form: str) -> Array:
@@ -156,28 +153,3 @@ def _compare(log_pairs: Array, form: str) -> Array:
         logs[at[:1]] = 0.0
         logs[at[1:]] = np.cumsum(log_pairs[at[:-1], at[1:]])
     return logs
-
-
-def _join(levels: Array, windows: Windows, recipe: Recipe, links: Positions | None) -> Array:
-    """(T,) index from the (K, W) log levels of windows."""
-    offsets = None
-    if recipe.needs_years:
-        rows = np.arange(len(levels)) - windows.before
-        offsets = np.clip(known(links)[rows + windows.length - 1] - rows, 0, windows.length - 2)
-    index: Array = splice(levels, splice=recipe.splice, onto=recipe.onto, links=offsets)
-    return index[windows.before :]
-
-
-def _links(prices: Array, quantities: Array | None, recipe: Recipe, years: Years | None) -> Positions | None:
-    """(T,) period that each is linked on, if link months matter; expanding windows need one that is priced."""
-    if not recipe.needs_years:
-        return None
-    return links_of(known(years), _priced(prices, quantities) if recipe.window == "expanding" else None)
-
-
-def _priced(prices: Array, quantities: Array | None) -> Flags:
-    """(T,) whether anything that weighs is sold."""
-    sold = np.isfinite(prices)
-    if quantities is not None:
-        sold &= np.where(sold, quantities, 0.0) > 0
-    return np.asarray(sold.any(axis=1), dtype=bool)

@@ -15,13 +15,13 @@ from tillwright.kernels.pairs import Array, Pair, PairSum, Positions, sum_all_pa
 from tillwright.kernels.recipes import (
     Recipe,
     Years,
+    join_windows,
     known,
     links_of,
     period_weights,
     window_length,
     windows_of,
 )
-from tillwright.kernels.splicing import splice
 
 # Matrices over all pairs of periods are made for so many numbers (8 MB) at a time.
 HELD = 1 << 20
@@ -225,7 +225,11 @@ def _multilateral(panel: _Panel, recipes: list[Recipe], *, collect: bool) -> tup
             apart: list[UnconnectedPeriods] = []
             fitted[key] = _fit(panel, recipe, sums, pairs, apart if collect else None), apart
         levels, apart = fitted[key]
-        made[at] = np.exp(levels) if recipe.method == "similarity" else _splice(panel, recipe, levels)
+        if recipe.method == "similarity":
+            made[at] = np.exp(levels)
+        else:
+            windows = windows_of(recipe, len(panel.prices), panel.links)
+            made[at] = join_windows(levels, windows, recipe, panel.links)
         first = {reason.segment: reason for reason in reversed(apart)}
         failures += [Failure(at, segment, reason) for segment, reason in sorted(first.items())]
     return made, failures
@@ -254,17 +258,6 @@ def _fit(
     return _FITTED[recipe.method](
         panel.prices, quantities, windows, segments=panel.segments, leave_out=panel.leave_out, apart=apart
     )
-
-
-def _splice(panel: _Panel, recipe: Recipe, levels: Array) -> Array:
-    """(B, T) series from the levels of windows."""
-    windows = windows_of(recipe, len(panel.prices), panel.links)
-    links = None
-    if recipe.needs_years:
-        rows = np.arange(levels.shape[1]) - windows.before
-        links = np.clip(known(panel.links)[rows + windows.length - 1] - rows, 0, windows.length - 2)
-    index: Array = splice(levels, splice=recipe.splice, onto=recipe.onto, links=links)
-    return index[:, windows.before :]
 
 
 def _shared_sums(panel: _Panel, recipes: Iterable[Recipe]) -> PairSum | None:

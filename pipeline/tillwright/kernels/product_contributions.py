@@ -12,9 +12,8 @@ from tillwright.kernels.bilateral import log_pair_levels
 from tillwright.kernels.formulas import BASE_WEIGHTED, wanted_pairs
 from tillwright.kernels.link_contributions import contribute, ratio_parts
 from tillwright.kernels.methods import HELD, Failure, make_indexes
-from tillwright.kernels.network import Flags
 from tillwright.kernels.pairs import Array, Positions, make_fields, sum_all_pairs
-from tillwright.kernels.recipes import Recipe, Years, links_of, period_weights, window_length, windows_of
+from tillwright.kernels.recipes import Recipe, Years, links_for, period_weights, window_length, windows_of
 from tillwright.kernels.windows import Windows
 
 
@@ -135,11 +134,7 @@ def _through_windows(
     index: Array,
     years: Years | None,
 ) -> Array:
-    links = None
-    if recipe.needs_years and years is not None:
-        sold = np.isfinite(prices) if quantities is None else np.isfinite(prices) & (quantities > 0)
-        priced: Flags = np.asarray(sold.any(axis=1))
-        links = links_of(years, priced if recipe.window == "expanding" else None)
+    links = links_for(recipe, prices, quantities, years)
     windows = windows_of(recipe, len(prices), links)
     total = np.zeros(prices.shape[1])
     start, end = movement

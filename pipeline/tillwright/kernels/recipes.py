@@ -12,6 +12,7 @@ from tillwright.errors import CallError
 from tillwright.kernels.formulas import BILATERAL, PRICES_ONLY
 from tillwright.kernels.network import Flags
 from tillwright.kernels.pairs import Array, Positions
+from tillwright.kernels.splicing import splice
 from tillwright.kernels.windows import Windows
 
 Years: TypeAlias = NDArray[np.int64]
@@ -110,6 +111,31 @@ def links_of(years: Years, priced: Flags | None = None) -> Positions:
         links = np.where(links >= 0, last[links], -1)
     found: Positions = np.maximum(links, 0).astype(np.intp)
     return found
+
+
+def links_for(recipe: Recipe, prices: Array, quantities: Array | None, years: Years | None) -> Positions | None:
+    """(T,) period that each is linked on, if link months matter; in expanding windows one that is priced."""
+    if not recipe.needs_years:
+        return None
+    return links_of(known(years), priced_periods(prices, quantities) if recipe.window == "expanding" else None)
+
+
+def priced_periods(prices: Array, quantities: Array | None) -> Flags:
+    """(T,) whether anything that weighs is sold."""
+    sold = np.isfinite(prices)
+    if quantities is not None:
+        sold &= np.where(sold, quantities, 0.0) > 0
+    return np.asarray(sold.any(axis=1), dtype=bool)
+
+
+def join_windows(levels: Array, windows: Windows, recipe: Recipe, links: Positions | None) -> Array:
+    """(…, T) index from the (…, K, W) log levels of the windows of a recipe, `links` as for `windows_of`."""
+    offsets = None
+    if recipe.needs_years:
+        rows = np.arange(levels.shape[-2]) - windows.before
+        offsets = np.clip(known(links)[rows + windows.length - 1] - rows, 0, windows.length - 2)
+    index: Array = splice(levels, splice=recipe.splice, onto=recipe.onto, links=offsets)
+    return index[..., windows.before :]
 
 
 def known(values: NDArray[Any] | None) -> NDArray[Any]:

@@ -10,7 +10,6 @@ import polars as pl
 from tillwright.kernels.churn import count_products, measure_flows, measure_lives, share_matched
 from tillwright.kernels.pairs import Positions
 from tillwright.panels import Block, PanelArrays, to_arrays
-from tillwright.periods import year_and_month
 from tillwright.stages.context import Context
 from tillwright.tables import TABLES
 
@@ -64,9 +63,7 @@ def price_items(sums: pl.DataFrame) -> pl.DataFrame:
 
 def link_positions(context: Context) -> Positions:
     """(T,) position of the last link month before each period, −1 where there is none."""
-    ends = (year_and_month(day, context.plan.plan.period) for day in context.periods()["period"])
-    link_month = context.plan.weights.link_month
-    years = np.array([year + (month > link_month) for year, month in ends], dtype=np.int64)
+    years = context.link_years(context.periods()["period"])
     return np.searchsorted(years, years, side="left") - 1
 
 

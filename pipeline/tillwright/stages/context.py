@@ -6,9 +6,11 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 from datetime import UTC, date, datetime
 
+import numpy as np
 import polars as pl
 
-from tillwright.periods import label_period, list_periods, next_period
+from tillwright.kernels.recipes import Years
+from tillwright.periods import label_period, list_periods, next_period, year_and_month
 from tillwright.plan import Definition, Plan
 from tillwright.queries import Connection, Resources, connect, offer
 from tillwright.store.references import References
@@ -50,6 +52,11 @@ class Context:
         """What makes items of an elementary aggregate one product; None = items that none is assigned to."""
         tree = self.references.tree
         return self.plan.products.definition(tree.ancestry(ea) if ea in tree.parents and ea is not None else [])
+
+    def link_years(self, periods: pl.Series) -> Years:
+        """(T,) the year that each period belongs to, ending in the link month of the weights."""
+        ends = (year_and_month(day, self.plan.plan.period) for day in periods)
+        return np.array([year + (month > self.plan.weights.link_month) for year, month in ends], dtype=np.int64)
 
     def label(self, period: date) -> str:
         """A period as people write it."""

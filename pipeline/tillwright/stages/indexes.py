@@ -13,9 +13,8 @@ from tillwright.kernels.churn import measure_churn
 from tillwright.kernels.filtered_chain import chain_links
 from tillwright.kernels.methods import Failure, make_indexes
 from tillwright.kernels.network import Flags
-from tillwright.kernels.recipes import Recipe, Years
+from tillwright.kernels.recipes import Recipe
 from tillwright.panels import Array, Block, PanelArrays, to_arrays
-from tillwright.periods import year_and_month
 from tillwright.stages.context import Context
 from tillwright.stages.hedonics import Adjusted, Adjustment, adjust, find_adjustments, write_diagnostics
 from tillwright.stages.intake import answers
@@ -101,7 +100,7 @@ def _try_index(
     cut = slice(int(priced[0]), int(priced[-1]) + 1)
     index, message = np.full(len(prices), np.nan), ""
     span = periods[cut.start : cut.stop]
-    years = _link_years(context, span)
+    years = context.link_years(span)
     problems: Sequence[UnconnectedPeriods | TooFewObservations]
     if isinstance(way, Recipe) and way.is_bilateral and way.form == "chained" and left_out is not None:
         index[cut], problems = chain_links(prices[cut], quantities[cut], way.method, left_out[cut]), []
@@ -125,13 +124,6 @@ def _try_index(
             "in common, or no window that reaches across the gap; imputed from the heading above"
         )
     return (index if np.isfinite(index).any() else None), message
-
-
-def _link_years(context: Context, periods: pl.Series) -> Years:
-    """The year that each period belongs to, ending in the link month of the weights."""
-    ends = (year_and_month(day, context.plan.plan.period) for day in periods)
-    link_month = context.plan.weights.link_month
-    return np.array([year + (month > link_month) for year, month in ends], dtype=np.int64)
 
 
 def _empty_leaves(context: Context, periods: pl.Series, compiled: Collection[str]) -> list[tuple[str, str, str]]:

@@ -240,16 +240,14 @@ def _way_inputs(context: Context) -> list[str]:
 
 
 def _index_inputs(context: Context) -> list[str]:
-    tree = str(sorted(context.references.tree.parents.items()))
     return [
         *_table_hashes(context, "screened"),
         *_span(context),
         context.references.weights.write_csv(),
         context.references.outside.write_csv(),
-        context.plan.index.model_dump_json(),
+        *_way_inputs(context),
         *_hedonic_inputs(context),
         str(context.plan.weights.link_month),
-        tree,
         *_answers(context),
     ]
 
@@ -267,9 +265,7 @@ def _hedonic_inputs(context: Context) -> list[str]:
     """What aggregates that are adjusted for quality rest on besides their prices; nothing without any."""
     if not context.plan.hedonic:
         return []
-    choices = [choice.model_dump_json() for choice in context.plan.hedonic]
     return [
-        *choices,
         context.plan.products.model_dump_json(exclude={"candidates"}),
         *_table_hashes(context, "items", "products"),
     ]
